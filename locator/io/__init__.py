@@ -1,0 +1,1 @@
+"""The only code of the package that opens data files."""

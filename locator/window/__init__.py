@@ -1,0 +1,1 @@
+"""The 3-D scene of the results."""

@@ -1,0 +1,1 @@
+"""Tests of the tool: by stage, outside figures, properties, benchmarks."""

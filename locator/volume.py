@@ -69,7 +69,7 @@ class Placement(Frozen):
 def _axes(affine: NDArray[np.float64]) -> NDArray[np.int64]:
     """World axis and sign that each array axis mostly follows, (3, 2)."""
     directions = affine[:3, :3] / voxel_sizes_mm(affine)
-    rows, columns = linear_sum_assignment(-np.abs(directions) ** 2)
+    rows, columns = linear_sum_assignment(-(np.abs(directions) ** 2))
     world = rows[np.argsort(columns)]
     return np.stack([world, np.sign(directions[world, range(3)]).astype(int)], axis=1)
 
@@ -228,7 +228,8 @@ def check_volume(
         msg = f"{where} holds values of type {values.dtype}, not plain intensities."
         raise VolumeError(msg + " Choose the magnitude image.")
     if affine.shape != (4, 4) or not np.isfinite(affine).all():
-        raise VolumeError(f"The affine of {where} is not a finite 4 x 4 matrix. Convert the scan again.")
+        msg = f"The affine of {where} is not a finite 4 x 4 matrix. Convert the scan again."
+        raise VolumeError(msg)
     if abs(np.linalg.det(affine[:3, :3])) < 1e-6:
         msg = f"The affine of {where} is singular: voxels would have no volume."
         raise VolumeError(msg + " Convert the scan again from the scanner's own files.")
@@ -243,7 +244,8 @@ def check_volume(
     low, high = float(values.min()), float(values.max())
     if low == high:
         kind = "all zero" if high == 0 else f"constant ({high:g})"
-        raise VolumeError(f"{where} is {kind}: there is no image in it. Check the file.")
+        msg = f"{where} is {kind}: there is no image in it. Check the file."
+        raise VolumeError(msg)
     sizes = voxel_sizes_mm(affine)
     if sizes.max() > MAX_VOXEL_MM:
         msg = (

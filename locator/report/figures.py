@@ -19,7 +19,10 @@ from locator.head import Head, Surface
 from locator.inverse import Inverse, statistic
 from locator.labels import Electrodes
 from locator.recording import Epochs
-from locator.report.raster import (
+from locator.skin import Skin
+from locator.sources import Sources
+from locator.statistics import Peaks, SourceTest
+from locator.views import (
     BLUE,
     GREEN,
     ORANGE,
@@ -32,9 +35,6 @@ from locator.report.raster import (
     head_view,
     sample_plane,
 )
-from locator.skin import Skin
-from locator.sources import Sources
-from locator.statistics import Peaks, SourceTest
 from locator.volume import Volume
 
 FloatArray = NDArray[np.float64]

@@ -12,7 +12,8 @@ from markupsafe import Markup
 from locator.geometry import mesh_volume_mm3
 from locator.pipeline import RunResults
 from locator.report import figures
-from locator.report.raster import VIEWS, capsule_tile, grey_window, png_uri
+from locator.report.raster import capsule_tile, png_uri
+from locator.views import VIEWS, grey_window
 
 TILE_HALF_MM = 20.0
 DOUBT_BELOW = 0.9

@@ -264,6 +264,30 @@ def project_to_skin(skin: Skin, points_scanner_mm: ArrayLike) -> FloatArray:
     return feet
 
 
+def image_on_grid(volume: Volume, skin: Skin) -> NDArray[np.float32]:
+    """Intensities on the working grid of the skin.
+
+    Parameters
+    ----------
+    volume : Volume
+        The volume that the skin was found in.
+    skin : Skin
+        From `find_skin` on this volume.
+
+    Returns
+    -------
+    (I, J, K) ndarray of float32
+        Same shape as ``skin.height_map_mm``; voxels of about 1 mm are taken as they are.
+    """
+    image, affine = _working_grid(canonical(volume))
+    corner = apply_affine(np.linalg.inv(affine), skin.scanner_from_grid[:3, 3])
+    box = tuple(
+        slice(round(float(c)), round(float(c)) + n)
+        for c, n in zip(corner, skin.height_map_mm.shape, strict=True)
+    )
+    return np.ascontiguousarray(image[box])
+
+
 def _silent(_fraction: float, _words: str) -> None:
     return
 
@@ -546,17 +570,16 @@ def _spread(
         small = tuple(-(-n // step) for n in shape)
         corner = np.clip(np.rint(rays.feet / step).astype(int), 0, np.array(small) - 1)
         flat = np.ravel_multi_index(tuple(corner.T), small)
-        for values, target in ((weight, total_up), (weight * rays.offset_mm, summed_up)):
+        for values, into in ((weight, total_up), (weight * rays.offset_mm, summed_up)):
             counted = np.bincount(flat, values, int(np.prod(small))).reshape(small)
-            dense: Grid = ndimage.gaussian_filter(
-                counted.astype(np.float32), sigma / (step * voxel_mm), truncate=3
-            )
-            dense *= np.float32((sigma / step) ** 2 / step * 100.0**-power)
+            factor = np.float32((sigma / step) ** 2 / step * 100.0**-power)
+            dense: Grid = counted.astype(np.float32) * factor
+            ndimage.gaussian_filter(dense, sigma / (step * voxel_mm), output=dense, truncate=3)
             if step > 1:
                 for axis, count in enumerate(shape):
                     dense = _resample_edges(dense, axis, np.arange(count) / step)
-            target += dense
-    mean: Grid = summed_up / np.maximum(total_up, np.float32(1e-12))
+            into += dense
+    mean: Grid = (summed_up / np.maximum(total_up, 1e-12)).astype(np.float32)
     return mean
 
 

@@ -1,0 +1,296 @@
+"""Capsule candidates in the shell around the skin, with sub-voxel centres and evidence."""
+
+from __future__ import annotations
+
+import logging
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy import ndimage
+from scipy.spatial import cKDTree
+
+from locator.errors import MarkerError, SettingError
+from locator.geometry import apply_affine, vertex_normals, voxel_sizes_mm
+from locator.markers.blobs import Grid, find_blobs
+from locator.markers.fit import BlobFit, FitSettings, Fitter
+from locator.markers.looks import capsule_probability
+from locator.results import Finding, Frozen, Progress
+from locator.skin import Skin, height_mm, image_on_grid
+from locator.volume import Volume
+
+__all__ = ["MarkerOptions", "Markers", "find_markers"]
+
+FloatArray = NDArray[np.float64]
+
+logger = logging.getLogger(__name__)
+
+
+@dataclass(frozen=True, kw_only=True, slots=True)
+class MarkerOptions:
+    """Settings of `find_markers`.
+
+    Attributes
+    ----------
+    capsule_mm : float or None
+        Diameter of the capsules, mm (3 to 15); None: estimated from the image.
+    least_contrast : float
+        Least brightness over the surroundings, in units of scalp fat (0.05 to 1). Oil is at
+        1.0 to 1.15 on T1 images (computed from T1 values of fat and oil: Hu HH, Nayak KS 2010,
+        J Magn Reson Imaging); 0.2 leaves room for dim and small capsules.
+    shell_mm : (float, float)
+        Least and greatest height of a centre over the skin, mm: 8 mm of holder and half of a
+        12 mm capsule above, 3 mm of squashed skin below.
+    at_least : int
+        With fewer blobs that look like capsules, the search is given up (1 to 100).
+    """
+
+    capsule_mm: float | None = None
+    least_contrast: float = 0.2
+    shell_mm: tuple[float, float] = (-3.0, 16.0)
+    at_least: int = 4
+
+    def __post_init__(self) -> None:
+        """Check the ranges."""
+        if self.capsule_mm is not None and not 3.0 <= self.capsule_mm <= 15.0:
+            msg = (
+                f"capsule_mm is {self.capsule_mm:g}; a capsule's diameter lies between 3 and 15 mm."
+            )
+            raise SettingError(msg)
+        if not 0.05 <= self.least_contrast <= 1.0:
+            msg = f"least_contrast is {self.least_contrast:g}; it must lie between 0.05 and 1."
+            raise SettingError(msg)
+        if not -10 <= self.shell_mm[0] < self.shell_mm[1] <= 25:
+            msg = f"shell_mm is {self.shell_mm}; it must rise, between -10 and 25 mm."
+            raise SettingError(msg)
+        if not 1 <= self.at_least <= 100:
+            msg = f"at_least is {self.at_least}; it must lie between 1 and 100."
+            raise SettingError(msg)
+
+
+@dataclass(frozen=True, eq=False, kw_only=True, slots=True)
+class Markers(Frozen):
+    """Every candidate blob, strongest first.
+
+    Attributes
+    ----------
+    centers_scanner_mm : (M, 3) ndarray
+        Centres, scanner mm, corrected by `shift_mm`.
+    covariance_mm2 : (M, 3, 3) ndarray
+        Covariance of each centre, mm^2.
+    diameter_mm, contrast, roundness, skin_mm, score : (M,) ndarray
+        Size; brightness over surroundings in units of fat; 1 for a ball, towards 0 for a sheet or
+        rod; height of the centre over the skin (mm); probability in [0, 1] that the blob is a
+        capsule by its looks alone. Sorted by falling score.
+    capsule_mm : float
+        Diameter that was given or estimated.
+    shift_mm : (3,) ndarray
+        Chemical shift that was removed from every centre, scanner mm; zeros when none is known.
+    findings : tuple of Finding
+    """
+
+    centers_scanner_mm: FloatArray
+    covariance_mm2: FloatArray
+    diameter_mm: FloatArray
+    contrast: FloatArray
+    roundness: FloatArray
+    skin_mm: FloatArray
+    score: FloatArray
+    capsule_mm: float
+    shift_mm: FloatArray
+    findings: tuple[Finding, ...] = ()
+
+
+def find_markers(
+    volume: Volume,
+    skin: Skin,
+    *,
+    options: MarkerOptions | None = None,
+    progress: Progress | None = None,
+) -> Markers:
+    """Find the blobs over the skin that can be capsules.
+
+    Parameters
+    ----------
+    volume : Volume
+        Checked T1 volume.
+    skin : Skin
+        Its skin, from `find_skin`.
+    options : MarkerOptions, optional
+        Default ``MarkerOptions()``.
+    progress : callable, optional
+        Called with a fraction and a few words.
+
+    Returns
+    -------
+    Markers
+        Candidates by falling score; impostors are among them, with low scores.
+
+    Raises
+    ------
+    MarkerError
+        If fewer than ``options.at_least`` blobs look like capsules.
+    """
+    options = MarkerOptions() if options is None else options
+    tell = progress if progress is not None else _silent
+    tell(0.0, "looking for bright blobs")
+    image = image_on_grid(volume, skin)
+    fat = _local_fat(image, skin)
+    floor = _air_level(image, skin)
+    diameters = (3.5, 13.0)
+    if options.capsule_mm is not None:
+        diameters = (0.75 * options.capsule_mm, 1.35 * options.capsule_mm)
+    blobs = find_blobs(
+        image,
+        skin,
+        floor=floor,
+        least=0.5 * options.least_contrast * skin.fat_intensity,
+        diameters_mm=diameters,
+        shell_mm=options.shell_mm,
+        at_most=400,
+    )
+    tell(0.3, "fitting blobs")
+    settings = FitSettings(noise_sd=skin.noise_sd)
+    fitter = Fitter(volume, skin, settings)
+    starts = apply_affine(skin.scanner_from_grid, blobs.places)
+    fits = [
+        fitter.fit(start, float(diameter))
+        for start, diameter in zip(starts, blobs.diameter_mm, strict=True)
+    ]
+    found = _distinct([fit for fit in fits if fit is not None])
+    if not found:
+        raise MarkerError(_nothing(0, options))
+    tell(0.8, "comparing blobs")
+    return _ranked(volume, skin, found, fat, options)
+
+
+def _silent(_fraction: float, _words: str) -> None:
+    return
+
+
+def _air_level(image: Grid, skin: Skin) -> float:
+    """Level of the air near the head."""
+    near = (skin.height_map_mm[::3, ::3, ::3] > 5) & (skin.height_map_mm[::3, ::3, ::3] < 20)
+    values = image[::3, ::3, ::3][near]
+    return float(np.median(values)) if values.size else 0.0
+
+
+class _Fat:
+    """Scalp-fat level near a point: it follows the bias field of the scan."""
+
+    def __init__(self, places: FloatArray, values: FloatArray, common: float) -> None:
+        self._tree = cKDTree(places)
+        self._values = values
+        self._common = common
+
+    def at(self, points: FloatArray) -> FloatArray:
+        """Level at points (N, 3), image units."""
+        count = min(150, len(self._values))
+        _, index = self._tree.query(points, k=count)
+        level = np.percentile(self._values[index.reshape(len(points), -1)], 70, axis=1)
+        local: FloatArray = np.clip(level, 0.4 * self._common, 2.5 * self._common)
+        return local
+
+
+def _local_fat(image: Grid, skin: Skin) -> _Fat:
+    vertices = skin.vertices_scanner_mm
+    normals = vertex_normals(vertices, skin.faces)
+    chosen = slice(None, None, max(1, len(vertices) // 6000))
+    depth = np.arange(0.5, 8.1, 0.75)
+    points = vertices[chosen][:, None] - depth[:, None] * normals[chosen][:, None]
+    index = apply_affine(np.linalg.inv(skin.scanner_from_grid), points.reshape(-1, 3))
+    profile = ndimage.map_coordinates(image, index.T, order=1, mode="nearest")
+    values = profile.reshape(-1, len(depth)).max(axis=1).astype(np.float64)
+    return _Fat(vertices[chosen], values, skin.fat_intensity)
+
+
+def _distinct(fits: list[BlobFit]) -> list[BlobFit]:
+    """One fit for each blob: the one that explains most."""
+    fits = sorted(fits, key=lambda fit: (-fit.explained, *fit.center_mm))
+    kept: list[BlobFit] = []
+    for fit in fits:
+        radius = float(np.prod(fit.radii_mm) ** (1 / 3))
+        if all(
+            np.linalg.norm(fit.center_mm - other.center_mm)
+            > 0.8 * max(radius, float(np.prod(other.radii_mm) ** (1 / 3)), 1.5)
+            for other in kept
+        ):
+            kept.append(fit)
+    return kept
+
+
+def _ranked(
+    volume: Volume, skin: Skin, fits: list[BlobFit], fat: _Fat, options: MarkerOptions
+) -> Markers:
+    centers = np.array([fit.center_mm for fit in fits])
+    radii = np.array([fit.radii_mm for fit in fits])
+    contrast = np.array([fit.amplitude for fit in fits]) / fat.at(centers)
+    diameter = 2 * np.prod(radii, axis=1) ** (1 / 3)
+    roundness = radii[:, 0] / radii[:, 2]
+    height = height_mm(skin, centers)
+    residual = np.array([fit.residual for fit in fits])
+    explained = np.array([fit.explained for fit in fits])
+    prior = _plausible(contrast, diameter, roundness, height, residual, explained, options)
+    looks = np.stack(
+        [np.log(contrast), np.log(diameter), height, np.log(residual), np.log(roundness)], axis=1
+    )
+    known = None if options.capsule_mm is None else float(np.log(options.capsule_mm))
+    score, mean = capsule_probability(looks, prior, log_diameter=known)
+    likely = int((score > 0.5).sum())
+    if likely < options.at_least:
+        raise MarkerError(_nothing(likely, options))
+    covariance = np.array([fit.covariance_mm2 for fit in fits])
+    voxel = voxel_sizes_mm(volume.scanner_from_voxel)
+    axes = np.asarray(volume.scanner_from_voxel)[:3, :3] / voxel
+    covariance = 2.0 * covariance + (axes * (0.05 * voxel) ** 2) @ axes.T
+    order = np.lexsort((*centers.T, -score))[: max(30, 3 * likely)]
+    capsule = options.capsule_mm if options.capsule_mm is not None else float(np.exp(mean[1]))
+    logger.info("Markers: %d blobs, %d look like capsules of %.1f mm", len(order), likely, capsule)
+    return Markers(
+        centers_scanner_mm=centers[order],
+        covariance_mm2=covariance[order],
+        diameter_mm=diameter[order],
+        contrast=contrast[order],
+        roundness=roundness[order],
+        skin_mm=height[order],
+        score=score[order],
+        capsule_mm=capsule,
+        shift_mm=np.zeros(3),
+    )
+
+
+def _plausible(
+    contrast: FloatArray,
+    diameter: FloatArray,
+    roundness: FloatArray,
+    height: FloatArray,
+    residual: FloatArray,
+    explained: FloatArray,
+    options: MarkerOptions,
+) -> FloatArray:
+    """Plausibility of each blob by itself: soft limits of what a capsule can be."""
+
+    def above(value: FloatArray, limit: float, width: float) -> FloatArray:
+        step: FloatArray = 1 / (1 + np.exp(-np.clip((value - limit) / width, -50, 50)))
+        return step
+
+    plausible: FloatArray = (
+        above(np.log(contrast), np.log(options.least_contrast), 0.1)
+        * above(-np.log(contrast), -np.log(2.5), 0.1)
+        * above(diameter, 3.0, 0.3)
+        * above(-diameter, -15.0, 0.5)
+        * above(roundness, 0.3, 0.04)
+        * above(height, options.shell_mm[0], 0.5)
+        * above(-height, -options.shell_mm[1], 0.5)
+        * above(explained, 0.6, 0.06)
+        * above(-residual, -0.25, 0.03)
+    )
+    return plausible
+
+
+def _nothing(likely: int, options: MarkerOptions) -> str:
+    return (
+        f"Found {likely} blobs that look like capsules over the skin, at least"
+        f" {options.at_least} are needed (stage markers). Check that the cap's capsules are in"
+        " the image and bright; a fat-suppressed scan does not show oil."
+    )

@@ -1,0 +1,350 @@
+"""Sub-voxel fit of one capsule: a blurred ellipsoid over air and the edge of the skin."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy import ndimage
+from scipy.special import ndtr
+
+from locator.geometry import apply_affine
+from locator.skin import Skin, skin_normals
+from locator.volume import Volume
+
+FloatArray = NDArray[np.float64]
+
+N_SHAPE = 9
+"""Three numbers for the centre, six for the ellipsoid."""
+
+
+@dataclass(frozen=True, kw_only=True, slots=True)
+class FitSettings:
+    """What all fits of one scan share.
+
+    Attributes
+    ----------
+    noise_sd : float
+        Noise of one voxel, image units.
+    skin_sd_mm : float
+        Width of the skin's edge besides the voxel, mm.
+    log_radius_sd : float
+        How far the logarithm of each radius may lie from the expected one.
+    log_shape_sd : float
+        How far the shape may lie from a ball, in the logarithm of the radii.
+    model_error : float
+        Share of the blob's brightness by which the model may be wrong in a voxel.
+    blur_mm : float
+        Blur of the image besides the voxel, mm.
+    """
+
+    noise_sd: float
+    skin_sd_mm: float = 0.3
+    log_radius_sd: float = 0.5
+    log_shape_sd: float = 0.3
+    model_error: float = 0.04
+    blur_mm: float = 0.3
+
+
+@dataclass(frozen=True, eq=False, slots=True)
+class BlobFit:
+    """One fitted blob.
+
+    Attributes
+    ----------
+    center_mm : (3,) ndarray
+        Scanner mm.
+    covariance_mm2 : (3, 3) ndarray
+        Of the centre, from the residuals.
+    amplitude : float
+        Brightness over the surroundings, image units.
+    radii_mm : (3,) ndarray
+        Semi-axes, rising.
+    explained : float
+        Share of the variance that the blob explains where its surroundings alone cannot.
+    residual : float
+        Root mean square residual over the amplitude.
+    """
+
+    center_mm: FloatArray
+    covariance_mm2: FloatArray
+    amplitude: float
+    radii_mm: FloatArray
+    explained: float
+    residual: float
+
+
+@dataclass(frozen=True, eq=False, slots=True)
+class _Window:
+    """The voxels round a candidate."""
+
+    points: FloatArray
+    values: FloatArray
+    weight: FloatArray
+    surroundings: FloatArray
+
+
+class Fitter:
+    """Fits blobs in one volume."""
+
+    def __init__(self, volume: Volume, skin: Skin, settings: FitSettings) -> None:
+        self.volume = volume
+        self.skin = skin
+        self.settings = settings
+        self._voxel_from_scanner = np.linalg.inv(volume.scanner_from_voxel)
+        self._grid_from_voxel = np.linalg.inv(skin.scanner_from_grid) @ volume.scanner_from_voxel
+        # A voxel is a box: its blur along each array axis is its size over sqrt(12).
+        box = np.asarray(volume.scanner_from_voxel)[:3, :3] / np.sqrt(12)
+        self._blur = box @ box.T + settings.blur_mm**2 * np.eye(3)
+
+    def fit(
+        self, center_mm: FloatArray, diameter_mm: float, *, iterations: int = 15
+    ) -> BlobFit | None:
+        """Fit one blob, starting from a centre and a diameter.
+
+        Parameters
+        ----------
+        center_mm : (3,) ndarray
+            Start, scanner mm.
+        diameter_mm : float
+            Expected diameter, mm.
+        iterations : int
+            At most so many steps.
+
+        Returns
+        -------
+        BlobFit or None
+            None when the fit leaves its start or finds nothing bright.
+        """
+        window = self._window(center_mm, diameter_mm)
+        if window is None:
+            return None
+        return self._descend(window, center_mm, diameter_mm, iterations)
+
+    def _window(self, center_mm: FloatArray, diameter_mm: float) -> _Window | None:
+        reach = 0.5 * diameter_mm * 1.45 + 2.5
+        middle = apply_affine(self._voxel_from_scanner, center_mm)
+        span = reach * np.sqrt((self._voxel_from_scanner[:3, :3] ** 2).sum(axis=1))
+        shape = np.array(self.volume.intensity.shape)
+        low = np.maximum(np.ceil(middle - span).astype(int), 0)
+        high = np.minimum(np.floor(middle + span).astype(int) + 1, shape)
+        if (high - low < 2).any():
+            return None
+        index = np.indices(high - low).reshape(3, -1).T + low
+        points = apply_affine(self.volume.scanner_from_voxel, index) - center_mm
+        near = (points**2).sum(axis=1) < reach**2
+        index, points = index[near], points[near]
+        values = self.volume.intensity[tuple(index.T)].astype(np.float64)
+        height = ndimage.map_coordinates(
+            self.skin.height_map_mm,
+            apply_affine(self._grid_from_voxel, index).T,
+            order=1,
+            mode="nearest",
+            output=np.float64,
+        )
+        # Under the skin anything can be; it counts almost nothing.
+        weight = 0.02 + 0.98 * np.clip((height + 1.0) / 1.0, 0, 1)
+        normal = skin_normals(self.skin, center_mm)[0]
+        spread = np.sqrt(normal @ self._blur @ normal + self.settings.skin_sd_mm**2)
+        inside = ndtr(-height / spread)
+        edge = np.exp(-0.5 * (height / spread) ** 2)
+        first, second = _tangents(normal)
+        along, across = points @ first / reach, points @ second / reach
+        columns = [np.ones(len(points))]
+        if inside.max() > 0.05:
+            columns += [inside, inside * along, inside * across, edge, edge * along, edge * across]
+        return _Window(points, values, weight, np.stack(columns, axis=1))
+
+    def _descend(
+        self, window: _Window, start_mm: FloatArray, diameter_mm: float, iterations: int
+    ) -> BlobFit | None:
+        """Levenberg-Marquardt over centre and shape; the rest is linear at every step."""
+        settings = self.settings
+        center = np.zeros(3)
+        inverse_shape = np.eye(3) * (2 / diameter_mm)
+        damping = 1e-2
+        noise = max(settings.noise_sd, 1e-6 * float(np.abs(window.values).max()), 1e-12)
+        state = self._evaluate(window, center, inverse_shape, noise, diameter_mm)
+        for _ in range(iterations):
+            amplitude = state.linear[0]
+            sd2 = noise**2 + (settings.model_error * amplitude) ** 2
+            jacobian = np.concatenate(
+                [amplitude * state.slope, state.blob[:, None], window.surroundings], axis=1
+            )
+            weighted = jacobian * (window.weight / sd2)[:, None]
+            normal = weighted.T @ jacobian
+            right = weighted.T @ state.residual
+            prior, pull = self._prior(inverse_shape, diameter_mm, normal.shape[0])
+            normal += prior
+            right += pull
+            diagonal = np.diag(normal).copy()
+            improved = False
+            for _ in range(4):
+                step = np.linalg.solve(
+                    normal + np.diag(damping * diagonal + 1e-12 * diagonal.max()), right
+                )
+                turn = np.clip(step[3:N_SHAPE], -0.3, 0.3)
+                move = step[:3] * min(1.0, 1.5 / max(float(np.linalg.norm(step[:3])), 1e-9))
+                trial_center = center + move
+                trial_shape = (np.eye(3) + _symmetric(turn)) @ inverse_shape
+                trial = self._evaluate(window, trial_center, trial_shape, noise, diameter_mm)
+                if trial.cost <= state.cost:
+                    improved = True
+                    break
+                damping *= 6
+            if not improved:
+                break
+            gain = state.cost - trial.cost
+            center, inverse_shape, state = trial_center, trial_shape, trial
+            damping = max(damping / 6, 1e-6)
+            if np.linalg.norm(center) > 0.75 * diameter_mm:
+                return None
+            if np.linalg.norm(move) < 0.003 and gain < 1e-3 * state.cost:
+                break
+        return self._result(window, start_mm, center, inverse_shape, state, noise)
+
+    def _prior(
+        self, inverse_shape: FloatArray, diameter_mm: float, size: int
+    ) -> tuple[FloatArray, FloatArray]:
+        """Precision and pull of the expected size and shape, for a multiplicative step."""
+        settings = self.settings
+        prior = np.zeros((size, size))
+        pull = np.zeros(size)
+        log_radii = -_log_symmetric(inverse_shape) - np.log(diameter_mm / 2) * np.eye(3)
+        mean = np.trace(log_radii) / 3
+        away = log_radii - mean * np.eye(3)
+        # A step E multiplies the inverse shape: the log radii change by -E.
+        common = np.zeros(6)
+        common[:3] = 1 / 3
+        prior[3:9, 3:9] += np.outer(common, common) / settings.log_radius_sd**2
+        pull[3:9] += common * mean / settings.log_radius_sd**2
+        centred = np.eye(6)
+        centred[:3, :3] -= 1 / 3
+        centred[3:, 3:] *= 2
+        prior[3:9, 3:9] += centred / settings.log_shape_sd**2
+        values = np.array([away[i, j] for i, j in _PAIRS])
+        pull[3:9] += centred @ values / settings.log_shape_sd**2
+        return prior, pull
+
+    def _evaluate(
+        self,
+        window: _Window,
+        center: FloatArray,
+        inverse_shape: FloatArray,
+        noise: float,
+        diameter_mm: float,
+    ) -> _State:
+        blob, slope = self._blob(window.points - center, inverse_shape)
+        columns = np.concatenate([blob[:, None], window.surroundings], axis=1)
+        weighted = columns * window.weight[:, None]
+        normal = weighted.T @ columns
+        normal[np.diag_indices_from(normal)] += 1e-3 + 1e-6 * np.trace(normal)
+        linear = np.linalg.solve(normal, weighted.T @ window.values)
+        residual = window.values - columns @ linear
+        settings = self.settings
+        sd2 = noise**2 + (settings.model_error * linear[0]) ** 2
+        log_radii = -_log_symmetric(inverse_shape) - np.log(diameter_mm / 2) * np.eye(3)
+        mean = np.trace(log_radii) / 3
+        away = log_radii - mean * np.eye(3)
+        cost = (
+            float(window.weight @ residual**2) / sd2
+            + len(residual) * np.log(sd2)
+            + mean**2 / settings.log_radius_sd**2
+            + float((away**2).sum()) / settings.log_shape_sd**2
+        )
+        return _State(blob, slope, linear, residual, cost)
+
+    def _blob(self, offset: FloatArray, inverse_shape: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Blurred ellipsoid of brightness 1 and its slopes in centre and shape."""
+        y = offset @ inverse_shape.T
+        rho = np.sqrt((y**2).sum(axis=1) + 1e-6)
+        gradient = (y @ inverse_shape) / rho[:, None]
+        steep = np.sqrt((gradient**2).sum(axis=1) + 1e-12)
+        outward = gradient / steep[:, None]
+        blur = np.sqrt(np.einsum("ni,ij,nj->n", outward, self._blur, outward))
+        z = (1 - rho) / (steep * blur)
+        blob = ndtr(z)
+        bell = np.exp(-0.5 * z**2) / np.sqrt(2 * np.pi) / (steep * blur)
+        slope = np.empty((len(offset), N_SHAPE))
+        slope[:, :3] = bell[:, None] * gradient
+        for column, (i, j) in enumerate(_PAIRS):
+            twice = 1.0 if i == j else 2.0
+            slope[:, 3 + column] = -bell * twice * y[:, i] * y[:, j] / rho
+        return blob, slope
+
+    def _result(
+        self,
+        window: _Window,
+        start_mm: FloatArray,
+        center: FloatArray,
+        inverse_shape: FloatArray,
+        state: _State,
+        noise: float,
+    ) -> BlobFit | None:
+        amplitude = float(state.linear[0])
+        if amplitude <= 0:
+            return None
+        radii = 1 / np.linalg.svd(inverse_shape, compute_uv=False)
+        counted = window.weight.sum()
+        variance = float(window.weight @ state.residual**2) / max(counted - 12, 1.0)
+        jacobian = np.concatenate(
+            [amplitude * state.slope, state.blob[:, None], window.surroundings], axis=1
+        )
+        variance = max(variance, noise**2)
+        normal = (jacobian * window.weight[:, None]).T @ jacobian / variance
+        prior, _ = self._prior(inverse_shape, 2 * float(np.prod(radii)) ** (1 / 3), len(normal))
+        normal += prior
+        normal[np.diag_indices_from(normal)] += 1e-9 * np.trace(normal)
+        covariance = np.linalg.inv(normal)[:3, :3]
+        # Against the surroundings alone, where the blob is.
+        weighted = window.surroundings * window.weight[:, None]
+        alone = weighted.T @ window.surroundings
+        alone[np.diag_indices_from(alone)] += 1e-3 + 1e-6 * np.trace(alone)
+        plain = window.values - window.surroundings @ np.linalg.solve(
+            alone, weighted.T @ window.values
+        )
+        explained = 1 - float(window.weight @ state.residual**2) / max(
+            float(window.weight @ plain**2), 1e-30
+        )
+        return BlobFit(
+            center_mm=start_mm + center,
+            covariance_mm2=(covariance + covariance.T) / 2,
+            amplitude=amplitude,
+            radii_mm=np.sort(radii),
+            explained=explained,
+            residual=float(np.sqrt(variance)) / amplitude,
+        )
+
+
+@dataclass(frozen=True, eq=False, slots=True)
+class _State:
+    blob: FloatArray
+    slope: FloatArray
+    linear: FloatArray
+    residual: FloatArray
+    cost: float
+
+
+_PAIRS = ((0, 0), (1, 1), (2, 2), (0, 1), (0, 2), (1, 2))
+
+
+def _symmetric(values: FloatArray) -> FloatArray:
+    matrix = np.zeros((3, 3))
+    for value, (i, j) in zip(values, _PAIRS, strict=True):
+        matrix[i, j] = matrix[j, i] = value
+    return matrix
+
+
+def _log_symmetric(matrix: FloatArray) -> FloatArray:
+    """Logarithm of the stretch in a matrix (its polar factor on the left)."""
+    values, vectors = np.linalg.eigh(matrix @ matrix.T)
+    logarithm: FloatArray = (vectors * (0.5 * np.log(np.maximum(values, 1e-12)))) @ vectors.T
+    return logarithm
+
+
+def _tangents(normal: FloatArray) -> tuple[FloatArray, FloatArray]:
+    axis = np.eye(3)[int(np.argmin(np.abs(normal)))]
+    first = np.cross(normal, axis)
+    first /= np.linalg.norm(first)
+    return first, np.cross(normal, first)

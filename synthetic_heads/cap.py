@@ -11,7 +11,7 @@ from numpy.typing import ArrayLike, NDArray
 from scipy.spatial.transform import Rotation
 
 from synthetic_heads.meshes import Skin, unit
-from synthetic_heads.tape import all_places
+from synthetic_heads.tape import all_places, needs_lower
 
 Array = NDArray[np.float64]
 
@@ -269,13 +269,13 @@ def make_cap(
     _check(worn, settings)
     rng = np.random.default_rng([int(seed), 0xCA9])
     marks = {name: np.asarray(point, dtype=np.float64) for name, point in landmarks_mm.items()}
-    places = all_places(vertices_mm, faces, marks)
+    skin = Skin(vertices_mm, faces)
+    places = all_places(vertices_mm, faces, marks, lower=needs_lower(worn), skin=skin)
     unknown = [name for name in worn if name not in places]
     if unknown:
         msg = f"No tape-measure rule for the name(s) {', '.join(unknown)}."
         raise ValueError(msg)
     ideal = np.array([places[name] for name in worn])
-    skin = Skin(vertices_mm, faces)
 
     right = unit(marks["RPA"] - marks["LPA"])
     forward = places["Fpz"] - places["Oz"]
@@ -399,6 +399,8 @@ def _draw_extras(
     usable = height > min(low, 0.0) - (35.0 if where == "outside" else 15.0)
     brow = float((nasion - center) @ up)
     usable &= (depth < 0.55 * float((nasion - center) @ front)) | (height > brow + 15.0)
+    # not on the cut through the neck
+    usable &= (skin.normals @ up > -0.6) & (height > height.min() + 12.0)
     pool = np.flatnonzero(usable)
     pool = pool[rng.permutation(len(pool))]
     nearest = np.concatenate(

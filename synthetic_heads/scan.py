@@ -11,18 +11,23 @@ Array = NDArray[np.float64]
 Image = NDArray[np.float32]
 
 
-def _inside(
-    capsules: Capsules, index: int, offset: Array, shape: str, grow_mm: float = 0.0
-) -> NDArray[np.bool_]:
-    """Which offsets (..., 3) from a capsule's centre lie in it (grown on all sides)."""
-    along = offset @ capsules.axes[index]
-    across = np.sqrt(np.maximum((offset**2).sum(axis=-1) - along**2, 0.0))
-    radius = capsules.diameters_mm[index] / 2 + grow_mm
-    half = capsules.heights_mm[index] / 2 + grow_mm
-    if shape == "disc":
-        return (across <= radius) & (np.abs(along) <= half)
-    inside: NDArray[np.bool_] = (across / radius) ** 2 + (along / half) ** 2 <= 1.0
-    return inside
+def _share_inside(
+    offset: Array, fine: Array, axis: Array, radius: float, half: float, form: str
+) -> Array:
+    """Share of the sub-voxels ``fine`` (S, 3) round each offset (N, 3) that lie in a capsule."""
+    along = offset @ axis
+    square = (offset**2).sum(axis=1)
+    fine_along = fine @ axis
+    # |o + f|^2 and (o + f).axis for all pairs without forming the sums
+    total = square[:, None] + 2 * (offset @ fine.T) + (fine**2).sum(axis=1)
+    along_both = along[:, None] + fine_along
+    across = total - along_both**2
+    if form == "disc":
+        inside = (across <= radius**2) & (np.abs(along_both) <= half)
+    else:
+        inside = across / radius**2 + along_both**2 / half**2 <= 1.0
+    share: Array = inside.mean(axis=1)
+    return share
 
 
 def capsule_fractions(
@@ -67,7 +72,10 @@ def capsule_fractions(
     fine = np.stack(np.meshgrid(*steps, indexing="ij"), axis=-1).reshape(-1, 3) @ affine[:3, :3].T
     found = np.zeros(shape, dtype=np.float32)
     for index in range(len(capsules)):
-        reach = 0.5 * np.hypot(capsules.diameters_mm[index], capsules.heights_mm[index]) + grow_mm
+        reach = (
+            0.5 * np.hypot(capsules.diameters_mm[index], capsules.heights_mm[index])
+            + np.sqrt(2.0) * grow_mm
+        )
         middle = inverse[:3, :3] @ capsules.centers_mm[index] + inverse[:3, 3]
         span = reach * np.sqrt((inverse[:3, :3] ** 2).sum(axis=1)) + 1.0
         low = np.maximum(np.floor(middle - span).astype(int), 0)
@@ -79,10 +87,15 @@ def capsule_fractions(
             axis=-1,
         )
         offset = grid @ affine[:3, :3].T + affine[:3, 3] - capsules.centers_mm[index]
-        share = np.zeros(offset.shape[:3])
-        for sub in fine:
-            share += _inside(capsules, index, offset + sub, form, grow_mm)
-        share /= len(fine)
+        radius = capsules.diameters_mm[index] / 2 + grow_mm
+        half = capsules.heights_mm[index] / 2 + grow_mm
+        flat = offset.reshape(-1, 3)
+        distance = np.linalg.norm(flat, axis=1)
+        corner = 0.5 * float(np.linalg.norm(sizes))
+        share = (distance < min(radius, half) - corner).astype(np.float64)
+        edge = (share == 0) & (distance < reach + corner)
+        share[edge] = _share_inside(flat[edge], fine, capsules.axes[index], radius, half, form)
+        share = share.reshape(offset.shape[:3])
         if weighted:
             share *= capsules.brightness[index]
         box = tuple(slice(a, b) for a, b in zip(low, high, strict=True))

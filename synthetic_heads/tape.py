@@ -144,7 +144,12 @@ def _down_the_skin(skin: Skin, start: Array, down: Array, outward: Array, length
 
 
 def all_places(
-    vertices_mm: ArrayLike, faces: ArrayLike, landmarks_mm: Mapping[str, ArrayLike]
+    vertices_mm: ArrayLike,
+    faces: ArrayLike,
+    landmarks_mm: Mapping[str, ArrayLike],
+    *,
+    lower: bool = True,
+    skin: Skin | None = None,
 ) -> dict[str, Array]:
     """All 10-05 places on a skin by the tape-measure rules.
 
@@ -156,6 +161,10 @@ def all_places(
         Its triangles, outward.
     landmarks_mm : mapping
         ``NAS``, ``INI``, ``LPA``, ``RPA``, each (3,), mm.
+    lower : bool
+        Also the places 5 and 10 % below the rows (9h, 9, I1, OI1 ...).
+    skin : Skin, optional
+        The same mesh, when it has been prepared already.
 
     Returns
     -------
@@ -184,7 +193,8 @@ def all_places(
     if lacking:
         msg = f"The tape-measure rules need the landmark(s) {', '.join(lacking)}."
         raise ValueError(msg)
-    skin = Skin(vertices_mm, faces)
+    if skin is None:
+        skin = Skin(vertices_mm, faces)
     nas, ini, lpa, rpa = (
         np.asarray(landmarks_mm[name], dtype=np.float64) for name in ("NAS", "INI", "LPA", "RPA")
     )
@@ -230,8 +240,9 @@ def all_places(
         tape["O1h" if odd else "O2h"] = ring.at(at_temple + 0.45 / 0.5 * (1 - at_temple))[0]
     for odd in (True, False):
         _fill_rows(skin, tape, odd=odd)
-        tenth = 0.1 * coronal.length_mm
-        tape.update(_lower_chain(skin, tape, sagittal, tenth, middle, odd=odd))
+        if lower:
+            tenth = 0.1 * coronal.length_mm
+            tape.update(_lower_chain(skin, tape, sagittal, tenth, middle, odd=odd))
     names = list(tape)
     on_skin = skin.closest(np.array([tape[name] for name in names]))
     places = dict(zip(names, on_skin, strict=True))
@@ -294,6 +305,13 @@ def _ears(skin: Skin, lpa: Array, rpa: Array, forward: Array, up: Array) -> dict
     return dict(zip(names, skin.closest(np.array([found[n] for n in names])), strict=True))
 
 
+def needs_lower(names: Iterable[str]) -> bool:
+    """Whether any of the names lies below the rows (9, 10, 9h, 10h, I1, OI1 ...)."""
+    return any(
+        name.rstrip("h").endswith(("9", "10")) or name.startswith(("I", "OI")) for name in names
+    )
+
+
 def place_names(
     vertices_mm: ArrayLike,
     faces: ArrayLike,
@@ -323,8 +341,8 @@ def place_names(
     ValueError
         If a landmark is missing or a name is not known.
     """
-    places = all_places(vertices_mm, faces, landmarks_mm)
     asked = list(names)
+    places = all_places(vertices_mm, faces, landmarks_mm, lower=needs_lower(asked))
     unknown = [name for name in asked if name not in places]
     if unknown:
         msg = f"No tape-measure rule for the name(s) {', '.join(unknown)}."

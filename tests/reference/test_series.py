@@ -47,7 +47,7 @@ def test_potentials_agree_with_the_worked_numbers(model, height, moment, directi
         electrodes, [[0, 0, height]], radii_mm=radii, conductivity_s_per_m=sigma
     )
     got = moment * lead[:, 0, 2 if direction == "rad" else 0]
-    # The worked numbers are printed to six significant figures: half of the last one is at most 5e-6.
+    # The worked numbers are printed to six figures: half of the last one is at most 5e-6.
     assert got == pytest.approx(expected, rel=5.01e-6, abs=1e-9)
 
 

@@ -243,9 +243,9 @@ def custom_layout(
             f" ({source}). Give x, y, z in mm for every name."
         )
         raise LabelError(msg)
-    bad = ~np.isfinite(places).all(axis=1)
-    if bad.any():
-        which = ", ".join(name for name, is_bad in zip(canonical, bad, strict=True) if is_bad)
+    bad = np.flatnonzero(~np.isfinite(places).all(axis=1))
+    if len(bad):
+        which = ", ".join(canonical[index] for index in bad)
         msg = f"The layout has no finite place for {which} ({source}). Give x, y, z in mm."
         raise LabelError(msg)
     if len(places) > 3:

@@ -149,7 +149,7 @@ def arc(
     if at_end < at_middle:  # go the other way round, so that the middle lies between
         second = -second
         at_middle, at_end = angle(middle), angle(end)
-    n_first = max(int(round(_SAMPLES * at_middle / max(at_end, 1e-9))), 2)
+    n_first = max(round(_SAMPLES * at_middle / max(at_end, 1e-9)), 2)
     n_first = min(n_first, _SAMPLES - 2)
     turn = np.concatenate(
         [

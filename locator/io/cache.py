@@ -261,8 +261,8 @@ class StageCache:
 
     def __init__(self, folder: Path) -> None:
         self.folder = folder
-        self.used: dict[str, str] = {}
         self._known: dict[int, tuple[Any, str]] = {}
+        self._files: dict[str, str] = {}
 
     def key(self, stage: str, function: Callable[..., Any], args: Any, kwargs: Any) -> str:
         """Return the key of one call: stage, code, library versions, and every argument.
@@ -285,15 +285,19 @@ class StageCache:
         known = self._known.get(id(value))
         if known is not None and known[0] is value:
             return known[1]
+        if isinstance(value, tuple):
+            inside = json.dumps([self._digest(item) for item in value])
+            return hashlib.sha256(b"tuple" + inside.encode()).hexdigest()
         return digest_of(value)
-
-    def know(self, value: Any, key: str) -> None:
-        """Remember the key of a value (a stage's result, or an input with its own hash)."""
-        self._known[id(value)] = (value, key)
 
     def path(self, stage: str, key: str) -> Path:
         """File name of an entry."""
-        return self.folder / f"{stage}-{key[:32]}.zip"
+        return self.folder / f"{stage.replace(' ', '_')}-{key[:32]}.zip"
+
+    def file_of(self, value: Any) -> str | None:
+        """File name of the entry that a value was read from, None for any other value."""
+        known = self._known.get(id(value))
+        return self._files.get(known[1]) if known is not None and known[0] is value else None
 
     def get(self, stage: str, key: str) -> Any:
         """Return the stored result, or None when there is none that can be read."""
@@ -307,16 +311,13 @@ class StageCache:
             path.unlink(missing_ok=True)
             return None
         os.utime(path)
-        self.used[stage] = path.name
-        self.know(value, key)
+        self._files[key] = path.name
+        self._known[id(value)] = (value, key)
         return value
 
     def put(self, stage: str, key: str, value: Any) -> None:
         """Store a result."""
-        path = self.path(stage, key)
-        store(path, value)
-        self.used[stage] = path.name
-        self.know(value, key)
+        store(self.path(stage, key), value)
 
     def prune(self, keep: set[str], budget_bytes: int = BUDGET_BYTES) -> None:
         """Remove what was used longest ago until the rest fits the budget.

@@ -9,10 +9,10 @@ from typing import Literal
 import numpy as np
 from numpy.typing import NDArray
 
-from locator.labels import Electrodes
+from locator.labels import Electrodes, contact_points
 from locator.markers import Markers
 from locator.results import Finding, Frozen
-from locator.skin import Skin, project_to_skin
+from locator.skin import Skin
 
 FloatArray = NDArray[np.float64]
 
@@ -183,7 +183,7 @@ def apply_reviews(
                 covariance[row] = markers.covariance_mm2[blob]
                 marker[row] = blob
                 why_not[blob] = ""
-            position[row] = project_to_skin(skin, capsule[row][None])[0]
+            position[row] = contact_points(capsule[row][None], skin)[0][0]
         if not np.isfinite(position[row]).all():
             position[row] = electrodes.positions_scanner_mm[row]
         for other in np.flatnonzero((marker == marker[row]) & (marker >= 0)):

@@ -9,7 +9,7 @@ import os
 import secrets
 import sys
 from collections.abc import Callable, Iterator, Mapping
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 from pathlib import Path
 from typing import IO, Any
 
@@ -58,7 +58,8 @@ def write_whole(
         )
         raise FileError(msg) from error
     finally:
-        part.unlink(missing_ok=True)
+        with suppress(OSError):
+            part.unlink(missing_ok=True)
 
 
 def _sync_folder(folder: Path) -> None:

@@ -1,8 +1,9 @@
-"""What survives correction for multiple comparisons, where its peak is, and how far to believe it."""
+"""The results of the statistics: what survives, where its peak is, and the null control."""
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from collections.abc import Mapping
+from dataclasses import dataclass, field
 
 import numpy as np
 from numpy.typing import NDArray
@@ -10,6 +11,10 @@ from numpy.typing import NDArray
 from locator.results import Finding, Frozen
 
 FloatArray = NDArray[np.float64]
+
+
+def _nothing() -> FloatArray:
+    return np.zeros(0)
 
 
 @dataclass(frozen=True, eq=False, kw_only=True, slots=True)
@@ -65,6 +70,9 @@ class Peaks(Frozen):
     region_causes_mm : mapping of str to float
         Radius due to each cause alone.
     findings : tuple of Finding
+    point_spread_mm : (K,) ndarray
+        Spatial deviation of the estimate of one noise-free source at the peak: the root of the
+        mean squared distance from it, weighted by the power of the estimate.
     """
 
     positions_scanner_mm: FloatArray
@@ -74,8 +82,9 @@ class Peaks(Frozen):
     time_s: FloatArray
     region_mm: FloatArray
     region_probability: FloatArray
-    region_causes_mm: dict[str, float]
+    region_causes_mm: Mapping[str, float]
     findings: tuple[Finding, ...] = ()
+    point_spread_mm: FloatArray = field(default_factory=_nothing)
 
 
 @dataclass(frozen=True, eq=False, kw_only=True, slots=True)

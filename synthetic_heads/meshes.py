@@ -173,7 +173,7 @@ def level_surface(
     vertices_mm : (V, 3) ndarray
     faces : (F, 3) ndarray of int32
     """
-    padded = np.pad(level, 1, mode="constant", constant_values=np.float32(spacing_mm))
+    padded = np.pad(level, 1, mode="constant", constant_values=np.float32(1e3))
     vertices, faces, _, _ = marching_cubes(padded, level=0.0)
     placed = (vertices.astype(np.float64) - 1.0) * spacing_mm + first_mm
     corners = placed[faces]

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import logging
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
@@ -173,18 +173,20 @@ def label_markers(
         absent=0.06,
     )
     turned = CapModel(anatomy.surface, base, fields, prior, turn=_HALF_TURN)
-    search = search_cap(model, evidence)
-    tell(0.6, "looks of this cap's capsules")
-    weight = np.zeros(len(centers))
-    weight[usable] = search.share.sum(axis=0)
-    looks = _looks(markers, heights, weight)
-    evidence = replace(search.evidence, points=flat[usable], log_ratio=looks[usable])
+
+    def look_again(share: FloatArray) -> FloatArray:
+        weight = np.zeros(len(centers))
+        weight[usable] = share
+        return _looks(markers, heights, weight)[usable]
+
     search = search_cap(
         model,
         evidence,
         other_models=(("worn back to front", turned, _BACK_TO_FRONT_LOG_ODDS),),
-        n_best=4,
+        look_again=look_again,
     )
+    looks = np.full(len(centers), -5.0)
+    looks[usable] = search.evidence.log_ratio
     tell(0.9, "electrodes")
     return _electrodes(
         markers, skin, layout, chosen, anatomy, search, usable, contacts, heights, normals, looks
@@ -335,9 +337,9 @@ def _looks(markers: Markers, heights: FloatArray, weight: FloatArray | None) -> 
     height, diameter and contrast against the capsules that the cap has.
     """
     score = np.clip(markers.score, 0.01, 0.99)
-    ratio = np.minimum(np.log(score / (1 - score)), 1.0)
+    ratio = np.log(score / (1 - score))
     if weight is None or weight.sum() < 4:
-        return ratio
+        return np.minimum(ratio - 2.0, 0.0)
     # Floor of each deviation: how well it is measured; range over which stray blobs scatter.
     for values, floor, span in (
         (heights, 0.5, 12.0),
@@ -347,8 +349,10 @@ def _looks(markers: Markers, heights: FloatArray, weight: FloatArray | None) -> 
         sd = max(spread, floor)
         own = np.exp(-0.5 * ((values - middle) / sd) ** 2) / (np.sqrt(2 * np.pi) * sd)
         stray = 0.5 * own + 0.5 / span
-        ratio = ratio + np.clip(np.log((own + 1e-12) / stray), -4.0, 1.0)
-    return ratio
+        ratio = ratio + np.maximum(np.log((own + 1e-12) / stray), -4.0)
+    # A typical capsule of this cap has ratio 0; the density of strays counts what looks like one.
+    typical, _ = _weighted_middle(ratio, weight)
+    return np.minimum(ratio - typical, 0.0)
 
 
 def _weighted_middle(values: FloatArray, weight: FloatArray) -> tuple[float, float]:

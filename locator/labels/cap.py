@@ -99,13 +99,21 @@ class CapModel:
         turn = Rotation.from_rotvec(np.radians(parameters[:3] * self.prior.turn_deg)).as_matrix()
         return turn @ self.turn, parameters[3:6] * self.prior.slide_mm
 
-    def places(self, parameters: FloatArray) -> FloatArray:
-        """Places (E, 3) on the skin, mm."""
-        shape = self.base + np.tensordot(parameters[6:], self.fields, axes=1) - self.center
+    def _shape(self, parameters: FloatArray) -> FloatArray:
+        """Places before slide and turn, from the centre of the head."""
+        bent: FloatArray = self.base + np.tensordot(parameters[6:], self.fields, axes=1)
+        return bent - self.center
+
+    def _carry(self, shape: FloatArray, parameters: FloatArray) -> FloatArray:
+        """Places slid and turned, not yet on the skin."""
         turn, slide = self._rigid(parameters)
         axes = self.surface.axes
-        turn = axes.T @ turn @ axes
-        return self.surface.project(self.center + shape @ turn.T + slide @ axes)
+        carried: FloatArray = self.center + shape @ (axes.T @ turn @ axes).T + slide @ axes
+        return carried
+
+    def places(self, parameters: FloatArray) -> FloatArray:
+        """Places (E, 3) on the skin, mm."""
+        return self.surface.project(self._carry(self._shape(parameters), parameters))
 
     def linear(self, parameters: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
         """Places (E, 3), tangential slopes (E, 3, P) and outward directions (E, 3)."""
@@ -113,13 +121,15 @@ class CapModel:
         normals = self.surface.normals(places)
         slopes = np.zeros((len(places), 3, self.n_parameters))
         step = 0.1
+        shape = self._shape(parameters)
+        moved = np.empty((6, *places.shape))
         for index in range(6):
-            moved = parameters.copy()
-            moved[index] += step
-            slopes[:, :, index] = (self.places(moved) - places) / step
+            changed = parameters[:6].copy()
+            changed[index] += step
+            moved[index] = self._carry(shape, changed)
+        slopes[:, :, :6] = ((self.surface.project(moved) - places) / step).transpose(1, 2, 0)
         turn, _ = self._rigid(parameters)
-        axes = self.surface.axes
-        turn = axes.T @ turn @ axes
-        slopes[:, :, 6:] = np.einsum("ab,keb->eak", turn, self.fields)
-        slopes -= normals[:, :, None] * np.einsum("ea,eap->ep", normals, slopes)[:, None, :]
+        turn = self.surface.axes.T @ turn @ self.surface.axes
+        slopes[:, :, 6:] = (self.fields @ turn.T).transpose(1, 2, 0)
+        slopes -= normals[:, :, None] * (normals[:, None, :] @ slopes)
         return places, slopes, normals

@@ -29,6 +29,9 @@ from locator.labels.cap import CapModel
 FloatArray = NDArray[np.float64]
 
 
+_NEGLIGIBLE = -12.0
+
+
 def match_sum(
     log_weights: FloatArray, *, n_turns: int = 200, tolerance: float = 1e-6
 ) -> tuple[FloatArray, float]:
@@ -55,6 +58,16 @@ def match_sum(
     >>> round(float(share[0, 0]), 6), round(float(np.exp(log_sum)), 6)
     (0.75, 4.0)
     """
+    # Capsules that no name can reach stay alone, whatever the messages say.
+    reached = np.flatnonzero(log_weights.max(axis=0, initial=-np.inf) > _NEGLIGIBLE)
+    if len(reached) < log_weights.shape[1]:
+        share = np.zeros_like(log_weights)
+        if len(reached) == 0:
+            return share, 0.0
+        share[:, reached], log_sum = match_sum(
+            log_weights[:, reached], n_turns=n_turns, tolerance=tolerance
+        )
+        return share, log_sum
     weight = np.exp(np.clip(log_weights, -60.0, 60.0))
     to_row = np.ones_like(weight)  # message from column j to row i
     share = np.zeros_like(weight)
@@ -175,7 +188,7 @@ def fit_cap(
         share, _ = match_sum(weights, n_turns=24 if not final else 60, tolerance=1e-4)
         taken = share.sum(axis=1)
         pull = share @ evidence.points - taken[:, None] * places
-        precision = identity + np.einsum("e,eap,eaq->pq", taken, slopes, slopes) / wide**2
+        precision = identity + _information(taken, slopes) / wide**2
         gradient = np.einsum("eap,ea->p", slopes, pull) / wide**2 - parameters
         move = np.linalg.solve(precision, gradient)
         parameters = parameters + move
@@ -183,7 +196,7 @@ def fit_cap(
             covariance = np.linalg.inv(precision)
             places, slopes, _ = model.linear(parameters)
             away2 = ((evidence.points[None] - places[:, None]) ** 2).sum(axis=2)
-            own = np.einsum("eap,pq,eaq->e", slopes, covariance, slopes)
+            own = ((slopes @ covariance) * slopes).sum(axis=(1, 2))
             total = float((share * away2).sum() + (taken * own).sum())
             count = float(taken.sum())
             jitter = _best_jitter(total, count)
@@ -192,6 +205,12 @@ def fit_cap(
         if final and np.abs(move).max() < 1e-3:
             break
     return finish_fit(model, evidence, parameters, jitter, origin)
+
+
+def _information(taken: FloatArray, slopes: FloatArray) -> FloatArray:
+    """Sum over names of the outer products of their slopes, weighted; (P, P)."""
+    flat = (slopes * np.sqrt(taken)[:, None, None]).reshape(-1, slopes.shape[2])
+    return flat.T @ flat
 
 
 def _best_jitter(total: float, count: float) -> float:
@@ -211,7 +230,7 @@ def finish_fit(
     share, log_sum = match_sum(weights)
     taken = share.sum(axis=1)
     precision = np.eye(model.n_parameters)
-    precision = precision + np.einsum("e,eap,eaq->pq", taken, slopes, slopes) / jitter**2
+    precision = precision + _information(taken, slopes) / jitter**2
     covariance = np.linalg.inv(precision)
     log_evidence = (
         log_sum
@@ -223,7 +242,7 @@ def finish_fit(
         # the jitter's own width about its maximum: 1 / sqrt(2 n)
         - 0.5 * np.log(4 * max(float(taken.sum()), 1.0) + 1 / _JITTER_LOG_SD**2)
     )
-    spread = np.einsum("eap,pq,ebq->eab", slopes, covariance, slopes)
+    spread = (slopes @ covariance) @ slopes.transpose(0, 2, 1)
     share, _ = match_sum(pair_log_weights(places, spread, jitter, evidence))
     return Fit(
         model=model,

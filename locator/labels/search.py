@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -100,6 +101,7 @@ def search_cap(
     evidence: Evidence,
     *,
     other_models: tuple[tuple[str, CapModel, float], ...] = (),
+    look_again: Callable[[FloatArray], FloatArray] | None = None,
     n_best: int = 5,
 ) -> Search:
     """Fit the cap from many starts and weigh the fits by their evidence.
@@ -111,6 +113,9 @@ def search_cap(
         Its density of strays and share of absent capsules are first guesses.
     other_models : tuple of (str, CapModel, float)
         The cap worn in other ways (back to front), each with the log of its prior odds.
+    look_again : callable, optional
+        Takes the shares (M,) of the capsules in the best first fit and returns their log
+        likelihood ratios (M,) by looks, now that it is known what this cap's capsules look like.
     n_best : int
         Coarse starts that are followed.
     """
@@ -118,6 +123,8 @@ def search_cap(
     for start in coarse_starts(model, evidence, n_best=n_best):
         add_fit(fits, fit_cap(model, evidence, start))
     best = max(fits, key=lambda fit: fit.log_evidence)
+    if look_again is not None:
+        evidence = replace(evidence, log_ratio=look_again(best.share.sum(axis=0)))
     evidence = refine(best, evidence)
     spacing = name_spacing_mm(best.places)
     for words, start in shift_starts(best, spacing):
@@ -168,7 +175,10 @@ def refine(fit: Fit, evidence: Evidence, *, reach_mm: float = 25.0) -> Evidence:
     gap = np.linalg.norm(evidence.points[:, None] - fit.places[None], axis=2).min(axis=1)
     near = gap < reach_mm
     area = cap_area_mm2(fit.places, reach_mm)
-    strays = float((1 - taken_points[near]).clip(0, 1).sum())
+    # Blobs that look unlike capsules count by how alike they look: only what could pass for a
+    # capsule competes with one.
+    alike = np.exp(np.minimum(evidence.log_ratio[near], 0.0))
+    strays = float(((1 - taken_points[near]).clip(0, 1) * alike).sum())
     absent = (float((1 - taken_names).sum()) + 1.0) / (len(fit.places) + 12.0)
     return replace(
         evidence,

@@ -68,9 +68,9 @@ class StarSurface(Frozen):
         first[weak] = np.cross(out[weak], np.array([1.0, 0.0, 0.0]) @ self.axes)
         first /= np.linalg.norm(first, axis=1, keepdims=True)
         second = np.cross(out, first)
-        along = self.project(points + step_mm * first) - self.project(points - step_mm * first)
-        across = self.project(points + step_mm * second) - self.project(points - step_mm * second)
-        normal = np.cross(along, across)
+        around = np.stack([first, -first, second, -second])
+        ahead, behind, one, other = self.project(points + step_mm * around)
+        normal = np.cross(ahead - behind, one - other)
         normal /= np.linalg.norm(normal, axis=1, keepdims=True)
         flipped: FloatArray = normal * np.sign((normal * out).sum(axis=1, keepdims=True))
         return flipped

@@ -1,0 +1,31 @@
+"""Scalp, outer skull, inner skull and tissues from the one T1 volume."""
+
+from locator.head.build import build_head
+from locator.head.model import (
+    BONE,
+    BRAIN_STEM,
+    CEREBELLUM,
+    CSF,
+    GREY,
+    OTHER,
+    SOFT,
+    WHITE,
+    Head,
+    HeadOptions,
+    Surface,
+)
+
+__all__ = [
+    "BONE",
+    "BRAIN_STEM",
+    "CEREBELLUM",
+    "CSF",
+    "GREY",
+    "OTHER",
+    "SOFT",
+    "WHITE",
+    "Head",
+    "HeadOptions",
+    "Surface",
+    "build_head",
+]

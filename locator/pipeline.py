@@ -436,7 +436,8 @@ def capsules_to_remove(
     if electrodes is not None:
         worn = worn.copy()
         worn[electrodes.marker[electrodes.marker >= 0]] = True
-    return np.asarray(markers.centers_scanner_mm[worn])
+    # Where they are drawn, which is not where they are when fat is displaced.
+    return np.asarray(markers.centers_scanner_mm[worn] + markers.shift_mm)
 
 
 def build(

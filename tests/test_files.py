@@ -49,10 +49,8 @@ def save_t1(path, *, sform=None, qform=None, sform_code=1, qform_code=1, shape=(
     rng = np.random.default_rng(3)
     image = nib.Nifti1Image(rng.integers(0, 200, shape).astype(np.int16), None)
     image.header.set_xyzt_units("mm")
-    if qform is not None:
-        image.set_qform(qform, qform_code)
-    if sform is not None:
-        image.set_sform(sform, sform_code)
+    image.header.set_qform(qform, qform_code if qform is not None else 0)
+    image.header.set_sform(sform, sform_code if sform is not None else 0)
     nib.save(image, path)
     return path
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import logging
+from collections.abc import Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
 
@@ -160,20 +161,28 @@ def recording_files(path: Path) -> list[Path]:
     return [files[0], *(extra for extra in files[1:] if extra.is_file())]
 
 
+@dataclass(frozen=True)
+class OwnPlaces:
+    """Names and places of a table that a person gave."""
+
+    names: tuple[str, ...]
+    positions_mm: NDArray[np.float64]
+    source: str
+
+
 # ── names ────────────────────────────────────────────────────────────────────────────────
 
 
 def _read_names(inputs: Inputs, options: SessionOptions) -> None:
     """Understand which electrodes are asked for, and lay them out."""
-    table, own = None, None
+    own: OwnPlaces | None = None
     if options.layout is not None:
-        table = bids.read_positions(options.layout, "layout")
-        own = table[0]
+        own = OwnPlaces(*bids.read_positions(options.layout, "layout")[:2], str(options.layout))
         _note(inputs, "layout", options.layout)
     if options.electrodes is not None:
         _read_given(inputs, options.electrodes)
         assert inputs.given is not None
-        own = inputs.given[0]
+        own = OwnPlaces(*inputs.given[:2], str(options.electrodes))
     asked = _asked_names(inputs, options, own)
     also = _canonical(options.also, own)
     if inputs.recording is not None:
@@ -188,13 +197,15 @@ def _read_names(inputs: Inputs, options: SessionOptions) -> None:
         rows = [names.index(name) for name in everyone]
         inputs.given = (everyone, places[rows], spread[rows])
         return
-    if table is None:
+    if own is None:
         inputs.layout = standard_layout(everyone)
     else:
-        assert options.layout is not None
-        landmarks = _layout_landmarks(options.layout)
         inputs.layout = custom_layout(
-            table[0], table[1], landmarks, str(options.layout), wanted=everyone
+            own.names,
+            own.positions_mm,
+            _layout_landmarks(Path(own.source)),
+            own.source,
+            wanted=everyone,
         )
 
 
@@ -212,9 +223,7 @@ def _layout_landmarks(path: Path) -> NDArray[np.float64] | None:
     return None
 
 
-def _asked_names(
-    inputs: Inputs, options: SessionOptions, own: tuple[str, ...] | None
-) -> tuple[str, ...]:
+def _asked_names(inputs: Inputs, options: SessionOptions, own: OwnPlaces | None) -> tuple[str, ...]:
     """Names with a channel or a capsule, in the order asked."""
     given = options.names
     if given is None or given == "eeg":
@@ -222,8 +231,7 @@ def _asked_names(
             msg = "The names are to come from the recording, but none was named. Give --eeg FILE."
             raise CommandLineError(msg)
         if own is not None:
-            where = str(options.electrodes or options.layout)
-            return _channels_of_layout(inputs, inputs.recording, own, where)
+            return _channels_of_table(inputs, inputs.recording, own)
         return scalp_electrodes(inputs.recording)
     if isinstance(given, tuple):
         texts = given
@@ -254,14 +262,13 @@ def _asked_names(
     return _canonical(electrodes, own)
 
 
-def _canonical(texts: tuple[str, ...] | list[str], own: tuple[str, ...] | None) -> tuple[str, ...]:
+def _canonical(texts: Sequence[str], own: OwnPlaces | None) -> tuple[str, ...]:
     """Return the layout's spelling of names, refusing empty, unknown and doubled ones."""
     if not texts:
         return ()
     if own is None:
         return standard_layout(texts).names
-    places = np.arange(3.0 * len(own)).reshape(-1, 3) + 30
-    return custom_layout(own, places, None, "the layout given", wanted=texts).names
+    return custom_layout(own.names, own.positions_mm, None, own.source, wanted=texts).names
 
 
 def _names_in_file(path: Path) -> tuple[str, ...]:
@@ -284,11 +291,9 @@ def _looks_like_path(text: str) -> bool:
     )
 
 
-def _channels_of_layout(
-    inputs: Inputs, recording: Recording, own: tuple[str, ...], where: str
-) -> tuple[str, ...]:
+def _channels_of_table(inputs: Inputs, recording: Recording, own: OwnPlaces) -> tuple[str, ...]:
     """Names of a table of one's own that have a channel, in the order of the recording."""
-    by_text = {name.casefold(): name for name in own}
+    by_text = {name.casefold(): name for name in own.names}
     found: list[str] = []
     for text in recording.channel_names:
         usual = normalise_name(text)
@@ -300,7 +305,7 @@ def _channels_of_layout(
                 Finding(
                     level="look",
                     stage="names",
-                    problem=f"Channel '{text}' is a scalp electrode without a place in {where} and"
+                    problem=f"Channel '{text}' is a scalp electrode without a place in {own.source} and"
                     " is not used.",
                     suggestion="Add its place to the table if it should be.",
                     subject=usual,
@@ -309,8 +314,8 @@ def _channels_of_layout(
             )
     if not found:
         msg = (
-            f"No channel of the recording has a name in {where} (its names begin"
-            f" {', '.join(own[:6])}; the channels {', '.join(recording.channel_names[:6])})."
+            f"No channel of the recording has a name in {own.source} (its names begin"
+            f" {', '.join(own.names[:6])}; the channels {', '.join(recording.channel_names[:6])})."
             " Use the same names in both."
         )
         raise LabelError(msg)

@@ -22,7 +22,12 @@ from locator.io.files import HIDDEN, clean_parts, folder_lock
 from locator.labels import LabelOptions
 from locator.markers import MarkerOptions
 from locator.pipeline import RunResults
-from locator.recording import EpochOptions, check_times, make_epochs
+from locator.recording import (
+    EpochOptions,
+    check_times,
+    make_epochs,
+    refuse_scanner_artefact,
+)
 from locator.session import outputs, records
 from locator.session.inputs import Inputs, read_inputs
 from locator.session.options import SessionOptions
@@ -255,6 +260,7 @@ def _compute_and_write(
         ),
     }
     # The recording comes first: most of what can be wrong with a session is wrong with it.
+    refuse_scanner_artefact(recording, where=str(options.eeg))
     epochs = stages.step(
         "epochs",
         make_epochs,

@@ -125,7 +125,8 @@ def cavity(grid: Grid, sizes: Sizes, step_mm: float) -> Field:
     ) / 2  # fmt: skip
     half_z = sizes.top - sizes.scalp["parietal"] - sizes.skull["parietal"]
     # egg shaped from above: widest behind the middle, narrower in front
-    narrowing = 1.0 - 0.0016 * np.clip(grid.y + 22.0, -15, 90) - 6e-6 * (grid.y + 22.0) ** 2
+    behind = (grid.y + 22.0) / 100.0
+    narrowing = 1.0 - 0.10 * behind - 0.09 * behind**2
     x = np.abs(grid.x) / (np.float32(half_x * 1.015) * narrowing)
     y = np.abs(grid.y) / np.float32(half_y)
     z = np.abs(grid.z) / np.float32(half_z)
@@ -133,10 +134,10 @@ def cavity(grid: Grid, sizes: Sizes, step_mm: float) -> Field:
     vault = (x**power + y**power + z**power) ** (1 / power) - 1
     vault *= np.float32(half_x)
     floor = -(grid.z + 21.0 + 0.10 * np.clip(-grid.y, 0, 60))
-    upper = overlap(vault.astype(np.float32), floor.astype(np.float32), 14.0)
+    upper = overlap(vault.astype(np.float32), floor.astype(np.float32), 18.0)
     temporal = grid.pair((0.57 * half_x, 8.0, -23.0), (0.43 * half_x, 41.0, 25.0))
-    fossa = grid.ellipsoid((0, -47.0, -28.0), (0.82 * half_x, 0.40 * half_y + 4, 36.0))
-    level = join(join(upper, temporal, 9.0), fossa, 10.0)
+    fossa = grid.ellipsoid((0, -47.0, -28.0), (0.80 * half_x, 0.42 * half_y + 4, 36.0))
+    level = join(join(upper, temporal, 9.0), fossa, 16.0)
     return as_distance(level, step_mm)
 
 
@@ -193,25 +194,27 @@ def _skin_of_face(grid: Grid, sizes: Sizes, vault: Field) -> tuple[Field, dict[s
     _, nose_y, nose_z = sizes.nasion
     wide = sizes.breadth / 154.0
     eye_x = sizes.pupils / 2
-    face = grid.ellipsoid((0, nose_y - 56, nose_z - 30), (66 * wide, 49, 50))
-    jaw = grid.ellipsoid((0, nose_y - 50, nose_z - 76), (55 * wide, 45, 44))
+    face = grid.ellipsoid((0, nose_y - 62, nose_z - 22), (70 * wide, 56, 60))
+    jaw = grid.ellipsoid((0, nose_y - 52, nose_z - 74), (55 * wide, 46, 46))
     chin = grid.ellipsoid((0, nose_y - 20, nose_z - 106), (21, 17, 17))
-    cheek = grid.pair((43 * wide, nose_y - 31, nose_z - 30), (21, 19, 18))
-    head = join(vault, join(face, jaw, 20.0), 16.0)
-    head = join(join(head, chin, 18.0), cheek, 14.0)
-    neck = grid.rod((0, -14, -70), (0, -32, -240), 55.0 * wide)
-    head = join(head, neck, 22.0)
+    cheek = grid.pair((43 * wide, nose_y - 33, nose_z - 32), (21, 19, 18))
+    head = join(vault, join(face, jaw, 22.0), 20.0)
+    head = join(join(head, chin, 18.0), cheek, 16.0)
+    neck = grid.rod((0, -18, -62), (0, -34, -240), 58.0 * wide, 54.0 * wide)
+    head = join(head, neck, 30.0)
+    forehead = grid.ellipsoid((0, nose_y - 36, nose_z + 2), (56 * wide, 35, 30))
+    head = join(head, forehead, 16.0)
     # eyes: a shallow hollow under the brow with the closed lid in it
-    hollow = grid.pair((eye_x + 1, nose_y + 1, nose_z - 5), (15, 9, 10))
-    head = cut(head, hollow, 8.0)
-    lid = grid.pair((eye_x, nose_y - 17, nose_z - 6), (13.5, 13.5, 13.5))
-    head = join(head, lid, 4.0)
+    hollow = grid.pair((eye_x, nose_y - 4, nose_z - 5), (16, 10, 10))
+    head = cut(head, hollow, 10.0)
+    lid = grid.pair((eye_x, nose_y - 22.5, nose_z - 6), (14.0, 13.6, 13.0))
+    head = join(head, lid, 6.0)
     bridge = grid.rod((0, nose_y - 5, nose_z - 4), (0, nose_y + 15, nose_z - 46), 7.0, 10.0)
     wings = grid.pair((11, nose_y + 3, nose_z - 49), (7.5, 10, 7))
     head = join(join(head, bridge, 7.0), wings, 5.0)
     root = grid.ellipsoid((0, nose_y + 8.5, nose_z + 1), (18, 7, 8))
     head = cut(head, root, 6.0)
-    lips = grid.ellipsoid((0, nose_y - 3, nose_z - 74), (24, 9, 11))
+    lips = grid.ellipsoid((0, nose_y - 8, nose_z - 72), (22, 8, 8))
     head = join(head, lips, 6.0)
     nostril = grid.pair((6, nose_y + 5, nose_z - 55), (3.2, 5.0, 6.0))
     head = cut(head, nostril, 1.5)
@@ -358,9 +361,9 @@ def _soft(grid: Grid, sizes: Sizes, outer: Field, scalp: Field, uneven: Field) -
     nape = np.maximum(nape, grid.z + 62.0)
     side = grid.rod((34, 12, -78), (30, 6, -250), 6.0, mirror=True)
     pads = np.maximum(np.minimum(np.minimum(pad, nape), side), scalp + skin + 1.0)
-    orbit = grid.pair((eye_x - 3, ny - 30, nz - 6), (16.5, 25, 15.5))
+    orbit = grid.pair((eye_x - 3, ny - 34, nz - 6), (16.5, 25, 15.5))
     orbit = np.maximum(np.maximum(orbit, scalp + 2.0), -outer + 1.0)
-    eye = grid.pair((eye_x, ny - 17, nz - 6), (12.0, 12.0, 12.0))
+    eye = grid.pair((eye_x, ny - 22.5, nz - 6), (11.8, 11.8, 11.8))
     nerve = grid.rod((eye_x, ny - 28, nz - 6), (9, ny - 66, nz - 2), 2.0, mirror=True)
     for shift in ((9, 0), (-9, 0), (0, 9), (0, -9)):
         nerve = np.minimum(
@@ -415,23 +418,25 @@ def build_brain(
     cerebrum = cut(hull, below_tent - 1.2, 1.0)
     cerebrum = cut(cerebrum, cistern, 4.0)
     # the fissure between the hemispheres, bounded below by the callosum
-    wander = 1.0 * np.sin(grid.y / 40.0 + rng.uniform(0, 6)) * np.clip((grid.z + 20) / 90, 0, 1)
+    wander = np.sin(grid.y / 40.0 + rng.uniform(0, 6)) * np.clip((grid.z + 20) / 90, 0, 1)
     body = Grid(np.zeros(1, np.float32), grid.y, grid.z).ellipsoid((0, -6, 4), (1e6, 40, 23))
     split = np.sqrt((grid.x - wander) ** 2 + np.minimum(body, 0) ** 2) - 0.7
-    cerebrum = np.maximum(cerebrum, -split).astype(np.float32)
+    walls = as_distance(np.maximum(cerebrum, -split).astype(np.float32), step_mm, 45.0)
     # the fissure over the temporal lobe
     slant = grid.z - (-13.0 + 0.30 * (34.0 - grid.y))
     beyond = np.maximum(np.maximum(grid.y - 36.0, -46.0 - grid.y), 30.0 - np.abs(grid.x))
-    sylvian = np.sqrt((0.95 * slant) ** 2 + np.maximum(beyond, 0) ** 2) - 0.8
-    cerebrum = np.maximum(cerebrum, -sylvian).astype(np.float32)
+    # thin sheets have to be worked out on the fine grid
+    fine_split = np.sqrt(finer(grid.x - wander) ** 2 + np.minimum(finer(body), 0) ** 2) - 0.7
+    fine_sylvian = np.sqrt((0.95 * finer(slant)) ** 2 + np.maximum(finer(beyond), 0) ** 2) - 0.9
     cerebrum = as_distance(cerebrum, step_mm, 45.0)
-    pial = fold(cerebrum, step_mm, rng)
+    pial = fold(walls, step_mm, rng, right=grid.x > wander)
+    pial = np.maximum(np.maximum(pial, finer(cerebrum)), -np.minimum(fine_split, fine_sylvian))
     white = pial + np.float32(sizes.cortex)
 
     big = float(np.clip(rng.normal(1.0, 0.15), 0.75, 1.35))  # ventricles vary
     horns = grid.chain(
         [(7, 27, 7), (9, 8, 17), (13, -18, 18), (21, -38, 8), (20, -54, 6)],
-        [3.2 * big, 4.0 * big, 4.6 * big, 5.4 * big, 2.4 * big],
+        [4.2 * big, 5.0 * big, 5.6 * big, 6.6 * big, 3.0 * big],
         mirror=True,
     )
     horns = np.minimum(
@@ -466,7 +471,7 @@ def build_brain(
     core = np.minimum(core, grid.rod((19, -44, -34), (8, -24, -28), 6.0, mirror=True))
     core = np.maximum(core, small + 3.0)
     return Brain(
-        pial=pial,
+        pial=pial.astype(np.float32),
         white=white.astype(np.float32),
         nuclei=finer(nuclei),
         ventricles=finer(np.minimum(ventricles, fourth)),

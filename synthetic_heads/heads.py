@@ -363,10 +363,8 @@ def _sphere(seed: int, voxel_mm: float, offset_sd: float) -> SyntheticHead:
     x, y, z = np.meshgrid(*[a.astype(np.float32) for a in axes], indexing="ij")
     radius = np.sqrt(x * x + y * y + z * z)
     # sulci deep enough that grey matter is found at 0.8 of the inner radius
-    pial = fold((radius - np.float32(radii["pial"])).astype(np.float32), step, rng,
-                depth_mm=(12.0, 22.0))  # fmt: skip
-    fine = finer(radius)
-    pial = np.where(fine > 30.0, pial, np.minimum(pial, -10.0)).astype(np.float32)
+    hull = (radius - np.float32(radii["pial"])).astype(np.float32)
+    pial = np.maximum(fold(hull, step, rng, depth_mm=(14.0, 24.0)), finer(hull))
     zero = (0, 0, 0)
     layers = [
         _layer(SKIN, radius - radii["scalp"], zero, 2),

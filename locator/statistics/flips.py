@@ -17,7 +17,6 @@ import os
 from collections.abc import Callable, Sequence
 from concurrent.futures import ThreadPoolExecutor
 
-import numba
 import numpy as np
 from numpy.typing import NDArray
 
@@ -25,6 +24,7 @@ from locator.errors import StatisticsError
 from locator.inverse import Inverse
 from locator.recording import Epochs, check_times
 from locator.results import Finding, Progress
+from locator.statistics.bounds import FilterGroups, group_filters, largest
 from locator.statistics.data import SourceTest
 
 LOG = logging.getLogger(__name__)
@@ -35,21 +35,8 @@ TIE = 1e-5
 """Relative difference that counts as a tie: permutations are computed in single precision."""
 COLUMNS = 4096
 """Sums (permutations times samples) at a time."""
-ROWS = 3 * 256
-"""Filter rows at a time: a tile of this by `COLUMNS` stays in the cache of a core."""
 MOST_EXACT = 20
 """Trials up to which all sign patterns can be asked for (2^20 of them)."""
-
-
-@numba.njit(nogil=True, cache=True, fastmath=True)
-def _keep_maxima(tile, best):  # type: ignore[no-untyped-def]
-    """Raise `best` to the power of each source (three rows of the tile) in each column."""
-    rows, columns = tile.shape
-    for row in range(0, rows, 3):
-        for column in range(columns):
-            power = tile[row, column] ** 2 + tile[row + 1, column] ** 2 + tile[row + 2, column] ** 2
-            if power > best[column]:
-                best[column] = power
 
 
 def filters(inverse: Inverse) -> FloatArray:
@@ -119,7 +106,7 @@ def _in_threads(work: Callable[[int], None], n: int, progress: Progress | None) 
 
 
 def flip_maxima(
-    weights: FloatArray,
+    groups: FilterGroups,
     trials_uv: FloatArray,
     signs: NDArray[np.float32],
     *,
@@ -129,8 +116,8 @@ def flip_maxima(
 
     Parameters
     ----------
-    weights : (S, 3, E) ndarray
-        Standardised filters.
+    groups : FilterGroups
+        The standardised filters.
     trials_uv : (N, E, T) ndarray
         The window of each trial.
     signs : (P, N) ndarray of float32
@@ -140,32 +127,17 @@ def flip_maxima(
     -------
     (P,) ndarray
     """
-    n_trials, n_electrodes, n_samples = trials_uv.shape
-    # The directions that the trials span: exact, since nothing outside them can occur in a sum.
-    flat = trials_uv.transpose(1, 0, 2).reshape(n_electrodes, -1)
-    values, vectors = np.linalg.eigh(flat @ flat.T)
-    basis = vectors[:, values > 1e-12 * max(values[-1], 1e-300)]
-    if basis.shape[1] == 0:
-        return np.zeros(len(signs))
-    small = np.ascontiguousarray(
-        (weights.reshape(-1, n_electrodes) @ basis).astype(np.float32)
-    )  # (3 S, r)
-    rank = small.shape[1]
-    scores = np.einsum("er,net->nrt", basis, trials_uv, optimize=True)
-    scores = np.ascontiguousarray(scores.reshape(n_trials, -1) / n_trials, dtype=np.float32)
+    n_trials, _, n_samples = trials_uv.shape
+    scores = np.einsum("re,net->nrt", groups.whiten, trials_uv, optimize=True)
+    rank = scores.shape[1]
+    flat = np.ascontiguousarray(scores.reshape(n_trials, -1) / n_trials, dtype=np.float32)
     per_chunk = max(1, COLUMNS // n_samples)
     maxima = np.zeros(len(signs))
 
     def work(chunk: int) -> None:
         part = signs[chunk * per_chunk : (chunk + 1) * per_chunk]
-        sums = (part @ scores).reshape(len(part), rank, n_samples)
-        columns = np.ascontiguousarray(sums.transpose(1, 0, 2).reshape(rank, -1))
-        best = np.zeros(columns.shape[1], dtype=np.float32)
-        for first in range(0, len(small), ROWS):
-            _keep_maxima(small[first : first + ROWS] @ columns, best)
-        maxima[chunk * per_chunk : chunk * per_chunk + len(part)] = best.reshape(
-            len(part), n_samples
-        ).max(axis=1)
+        sums = (part @ flat).reshape(len(part), rank, n_samples)
+        maxima[chunk * per_chunk : chunk * per_chunk + len(part)] = largest(groups, sums)
 
     _in_threads(work, -(-len(signs) // per_chunk), progress)
     return maxima
@@ -193,6 +165,7 @@ def sign_flip_test(
     *,
     window_s: Sequence[float] | None = None,
     n_permutations: int = 5000,
+    groups: FilterGroups | None = None,
     rng: np.random.Generator,
     progress: Progress | None = None,
 ) -> SourceTest:
@@ -208,6 +181,8 @@ def sign_flip_test(
         Tested part, s; default: the epoch after 0.
     n_permutations : int
         Sign patterns, the identity among them; all 2^N when those are not more.
+    groups : FilterGroups, optional
+        Of this inverse, when several tests share it.
     rng : numpy.random.Generator
     progress : callable, optional
 
@@ -275,7 +250,9 @@ def sign_flip_test(
     else:
         signs, exact = _signs(len(epochs.data_uv), n_permutations, rng)
         trials = epochs.data_uv[:, :, samples]
-        null_maxima = flip_maxima(weights, trials, signs, progress=progress)
+        if groups is None:
+            groups = group_filters(weights, inverse.noise_covariance_uv2)
+        null_maxima = flip_maxima(groups, trials, signs, progress=progress)
         null_maxima[0] = statistic.max()
         if exact:
             null_maxima = np.concatenate([null_maxima, null_maxima])

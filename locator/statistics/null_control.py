@@ -33,8 +33,9 @@ from locator.recording import (
     prepare_recording,
 )
 from locator.results import Finding, Progress
+from locator.statistics.bounds import group_filters
 from locator.statistics.data import NullControl
-from locator.statistics.flips import ALPHA, sign_flip_test
+from locator.statistics.flips import ALPHA, filters, sign_flip_test
 
 LOG = logging.getLogger(__name__)
 
@@ -223,6 +224,7 @@ def null_control(
         )
     if continuous is None:
         continuous = prepare_recording(recording, names=inverse.electrode_names, options=options)
+    groups = group_filters(filters(inverse), inverse.noise_covariance_uv2)
     survived: list[bool] = []
     places: list[str] = []
     for done, (place, samples) in enumerate(runs):
@@ -236,7 +238,12 @@ def null_control(
         if len(epochs.data_uv) < max(6, size // 2):
             continue
         test = sign_flip_test(
-            epochs, inverse, window_s=window_s, n_permutations=n_permutations, rng=rng
+            epochs,
+            inverse,
+            window_s=window_s,
+            n_permutations=n_permutations,
+            groups=groups,
+            rng=rng,
         )
         survived.append(bool((test.corrected_p < ALPHA).any()))
         places.append(place)

@@ -287,10 +287,18 @@ def _sidecar(
 
 
 def _frequency_axis(sidecar: dict[str, Any]) -> int | None:
-    """Frequency axis from phase and slice directions of a sidecar, where both are told."""
+    """Frequency axis as a sidecar tells it, or from its phase and slice directions."""
     axes = {"i": 0, "j": 1, "k": 2}
-    phase = axes.get(str(sidecar.get("PhaseEncodingDirection", "")).rstrip("-"))
-    across = axes.get(str(sidecar.get("SliceEncodingDirection", "")).rstrip("-"))
+
+    def axis(*keys: str) -> int | None:
+        told = (axes.get(str(sidecar.get(key, "")).rstrip("+-")) for key in keys)
+        return next((number for number in told if number is not None), None)
+
+    frequency = axis("FrequencyEncodingAxis", "FrequencyEncodingDirection")
+    if frequency is not None:
+        return frequency
+    phase = axis("PhaseEncodingDirection", "PhaseEncodingAxis")
+    across = axis("SliceEncodingDirection")
     if phase is None or across is None or phase == across:
         return None
     return 3 - phase - across

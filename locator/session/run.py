@@ -57,6 +57,7 @@ def out_folder(options: SessionOptions) -> Path:
 def _at_work(out: Path, told: Told) -> Iterator[Stages]:
     """Hold the folder, clean what stopped runs left, and carry out stages in it."""
     with folder_lock(out):
+        (out / "locator-error.log").unlink(missing_ok=True)
         left = clean_parts(out)
         if left:
             logger.info("removed %s half-written files of a stopped run", left)
@@ -170,7 +171,7 @@ def run_head(options: SessionOptions, *, told: Told = silent) -> Outcome:
     """
     out = out_folder(options)
     inputs = read_inputs(options, names=False, recording=False, out=out)
-    settings = {
+    settings: dict[str, Any] = {
         "skin_options": SkinOptions(),
         "marker_options": MarkerOptions(capsule_mm=options.capsule_mm),
         "head_options": HeadOptions(),

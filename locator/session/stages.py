@@ -63,7 +63,7 @@ class Stages:
         if not kept:
             if "progress" in inspect.signature(function).parameters:
                 settings["progress"] = lambda share, words: self.told(
-                    stage, min(share, 0.99), words
+                    stage, min(max(share, 0.001), 0.99), words
                 )
             self.cache.put(stage, key, function(*args, **settings))
             result = self.cache.get(stage, key)

@@ -136,12 +136,18 @@ def choose_dipole(
     rng = np.random.default_rng([seed, 101])
     z_min = _lowest_z_mm(head)
     if head.kind == "sphere":
-        while True:
-            outward = rng.normal(size=3)
-            outward /= np.linalg.norm(outward)
-            if outward[2] > 0.15:  # over the lowest row of the cap
-                break
-        place = head.center_mm + eccentricity * head.radii_mm["inner_skull"] * outward
+        wanted = eccentricity * head.radii_mm["inner_skull"]
+        voxels = np.argwhere(head.labels == GREY)
+        away = _scanner_mm(head, voxels) - head.center_mm
+        radius = np.linalg.norm(away, axis=1)
+        # Within half a voxel of the sphere, and over the lowest row of the cap.
+        fits = (np.abs(radius - wanted) <= 0.5) & (away[:, 2] > 0.15 * radius)
+        if not fits.any():
+            msg = f"No grey matter {wanted:.1f} mm from the centre: choose another eccentricity."
+            raise ValueError(msg)
+        outward = away[fits][int(rng.integers(fits.sum()))]
+        outward /= np.linalg.norm(outward)
+        place = head.center_mm + wanted * outward
         normal = outward
     else:
         depth = _depth_mm(head)

@@ -129,9 +129,15 @@ def _zero_phase(
     both directions together give -3 dB at the edges asked for.
     """
     both = np.sqrt(2.0) - 1.0
-    parts = [signal.butter(4, high_hz / both ** (1 / 8), "low", fs=rate, output="sos")]
+
+    def edge_hz(wanted_hz: float, factor: float) -> float:
+        # The bilinear transform bends the frequencies by a tangent.
+        return float(np.arctan(np.tan(np.pi * wanted_hz / rate) * factor) * rate / np.pi)
+
+    parts = [signal.butter(4, edge_hz(high_hz, both ** (-1 / 8)), "low", fs=rate, output="sos")]
     if low_hz > 0:
-        parts.append(signal.butter(2, low_hz * both ** (1 / 4), "high", fs=rate, output="sos"))
+        low_edge = edge_hz(low_hz, both ** (1 / 4))
+        parts.append(signal.butter(2, low_edge, "high", fs=rate, output="sos"))
     sections = np.vstack(parts)
     edge = int(rate / low_hz) if low_hz > 0 else int(rate / high_hz) * 3
     bounds = [0, *np.asarray(breaks, dtype=int).tolist(), data_uv.shape[1]]

@@ -3,9 +3,9 @@
 Channels, on the epochs with the median over channels taken away at every sample:
 
 * flat: robust amplitude (1.4826 times the median absolute deviation, reference of the file) under
-  ``flat_uv``;
-* noisy or weak: the logarithm of the amplitude is more than ``channel_z`` robust standard
-  deviations from the median channel, and the amplitude more than 2.5 times above or below it;
+  ``flat_uv``, or under a fiftieth of the median channel's;
+* noisy: the logarithm of the amplitude is more than ``channel_z`` robust standard deviations above
+  the median channel, and the amplitude more than 2.5 times that;
 * alone: the best correlation with any other channel is under 0.4, more than ``channel_z`` robust
   standard deviations under the median channel, which has over 0.6;
 * bad by itself in more than ``channel_share`` of the trials.
@@ -31,6 +31,7 @@ from locator.recording.data import EpochOptions
 FloatArray = NDArray[np.float64]
 
 FLOOR = 0.1
+FLAT_SHARE = 0.02
 LEAST_RATIO = 2.5
 LEAST_CORRELATION = 0.4
 USUAL_CORRELATION = 0.6
@@ -82,19 +83,23 @@ def judge_channels(
     """
     bad = {name: "marked bad in the file, or not finite" for name in marked_bad}
     own = _amplitude(data_uv)
-    usual = float(np.median(own))
-    if usual > LARGEST_MEDIAN_UV or not usual > 0:
-        what = "all channels are flat" if not usual > 0 else f"their usual amplitude is {usual:.3g}"
+    alive = own[own >= options.flat_uv]
+    usual = float(np.median(alive)) if len(alive) else 0.0
+    if usual > LARGEST_MEDIAN_UV or len(alive) == 0:
+        if len(alive):
+            what = f"their usual amplitude is {usual:.3g} uV"
+        else:
+            what = f"all channels are flat, at most {own.max():.2g} uV"
         msg = (
-            f"The amplitudes are not those of an EEG in uV: {what} uV ({where}). Check the unit"
+            f"The amplitudes are not those of an EEG in uV: {what} ({where}). Check the unit"
             " that the file declares for its channels, and the amplifier."
         )
         raise RecordingError(msg)
+    limit = max(options.flat_uv, FLAT_SHARE * usual)
     for row, name in enumerate(names):
-        if name not in bad and own[row] < options.flat_uv:
+        if name not in bad and own[row] < limit:
             bad[name] = (
-                f"flat, {own[row]:.2g} uV (limit {options.flat_uv:g} uV): the reference, or not"
-                " connected"
+                f"flat, {own[row]:.2g} uV (limit {limit:.2g} uV): the reference, or not connected"
             )
     for _ in range(3):
         good = np.array([row for row, name in enumerate(names) if name not in bad])
@@ -104,13 +109,11 @@ def judge_channels(
         amplitude = np.maximum(_amplitude(part), 1e-9)
         score = _robust_z(np.log(amplitude))
         ratio = amplitude / np.median(amplitude)
-        wrong = (np.abs(score) > options.channel_z) & (
-            (ratio > LEAST_RATIO) | (ratio < 1 / LEAST_RATIO)
-        )
+        wrong = (score > options.channel_z) & (ratio > LEAST_RATIO)
         found = {
             names[good[row]]: (
-                f"{'noisy' if ratio[row] > 1 else 'weak'}, {amplitude[row]:.1f} uV, {ratio[row]:.1f}"
-                f" times the usual {np.median(amplitude):.1f} uV ({score[row]:+.1f} robust SD)"
+                f"noisy, {amplitude[row]:.1f} uV, {ratio[row]:.1f} times the usual"
+                f" {np.median(amplitude):.1f} uV ({score[row]:+.1f} robust SD)"
             )
             for row in np.flatnonzero(wrong)
         }

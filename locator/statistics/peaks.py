@@ -154,7 +154,7 @@ def find_peaks(
     findings: list[Finding] = []
     if surviving.any():
         rows = average_reference(rows_uv_per_nam)
-        samples = window_samples(epochs, test.window_s)
+        samples = window_samples(epochs, tuple(test.window_s))
         average = epochs.data_uv.mean(axis=0)[:, samples]
         weights = filters(inverse)
         white = whitener(inverse)

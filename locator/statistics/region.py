@@ -226,8 +226,8 @@ def peak_region(
                 " Compute it for the same sources."
             )
             raise StatisticsError(msg)
-    for other in other_inverses:
-        if other.electrode_names != inverse.electrode_names:
+    for alternative in other_inverses:
+        if alternative.electrode_names != inverse.electrode_names:
             msg = (
                 "A source estimate of other regularisation has other electrodes (stage statistics)."
                 " Make it for the same electrodes."

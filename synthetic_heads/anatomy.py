@@ -87,7 +87,7 @@ def draw_sizes(rng: np.random.Generator) -> Sizes:
         **drawn,
         skull=skull,
         scalp=scalp,
-        csf=float(np.clip(rng.normal(2.8, 0.5), 1.8, 4.0)),
+        csf=float(np.clip(rng.normal(2.4, 0.4), 1.6, 3.6)),
         cortex=float(np.clip(rng.normal(2.6, 0.12), 2.3, 2.9)),
         fat=float(np.clip(rng.normal(4.5, 1.0), 2.8, 7.0)),
     )
@@ -127,7 +127,7 @@ def cavity(grid: Grid, sizes: Sizes, step_mm: float) -> Field:
     # egg shaped from above: widest behind the middle, narrower in front
     behind = (grid.y + 22.0) / 100.0
     narrowing = 1.0 - 0.10 * behind - 0.09 * behind**2
-    x = np.abs(grid.x) / (np.float32(half_x * 1.015) * narrowing)
+    x = np.abs(grid.x) / (np.float32(half_x) * narrowing)
     y = np.abs(grid.y) / np.float32(half_y)
     z = np.abs(grid.z) / np.float32(half_z)
     power = np.float32(2.25)
@@ -407,7 +407,7 @@ def build_brain(
 ) -> Brain:
     """Folded cerebrum, ventricles, nuclei, cerebellum, brain stem (coarse in, fine out)."""
     uneven = band_noise(rng, inside.shape, step_mm, 60.0, 0.3)
-    gap = sizes.csf * (1 + 0.15 * uneven) + 0.9 * np.clip(grid.z / 60.0, 0, 1.3)
+    gap = sizes.csf * (1 + 0.15 * uneven) + 0.7 * np.clip(grid.z / 60.0, 0, 1.3)
     hull = (inside + np.maximum(gap, 1.2)).astype(np.float32)
     # the tent between cerebrum and cerebellum
     ridge = np.sqrt(((grid.y + 30.0) / 52.0) ** 2 + (grid.x / 58.0) ** 2)

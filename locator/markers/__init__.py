@@ -16,7 +16,7 @@ from locator.markers.blobs import Grid, find_blobs
 from locator.markers.fit import BlobFit, FitSettings, Fitter
 from locator.markers.looks import capsule_probability
 from locator.results import Finding, Frozen, Progress
-from locator.skin import Skin, height_mm, image_on_grid
+from locator.skin import Skin, height_mm, image_on_grid, skin_normals
 from locator.volume import Volume
 
 __all__ = ["MarkerOptions", "Markers", "find_markers"]
@@ -150,18 +150,22 @@ def find_markers(
         at_most=400,
     )
     tell(0.3, "fitting blobs")
-    settings = FitSettings(noise_sd=skin.noise_sd)
-    fitter = Fitter(volume, skin, settings)
+    fitter = Fitter(volume, skin, FitSettings(noise_sd=skin.noise_sd))
     starts = apply_affine(skin.scanner_from_grid, blobs.places)
-    fits = [
-        fitter.fit(start, float(diameter))
-        for start, diameter in zip(starts, blobs.diameter_mm, strict=True)
-    ]
-    found = _distinct([fit for fit in fits if fit is not None])
+    found = _distinct(_fit_all(fitter, skin, starts, blobs.diameter_mm))
+    if not found:
+        raise MarkerError(_nothing(0, options))
+    # Once more, all from the size that the capsules of this scan have in common: a first scale
+    # that was too small sees only a part of a capsule.
+    tell(0.6, "fitting blobs of the common size")
+    seen = _Evidence.of(found, skin, fat)
+    common = float(np.exp(seen.judge(options)[1][1]))
+    starts = np.array([fit.center_mm for fit in found])
+    found = _distinct(_fit_all(fitter, skin, starts, np.full(len(found), common)))
     if not found:
         raise MarkerError(_nothing(0, options))
     tell(0.8, "comparing blobs")
-    return _ranked(volume, skin, found, fat, options)
+    return _ranked(volume, found, _Evidence.of(found, skin, fat), options)
 
 
 def _silent(_fraction: float, _words: str) -> None:
@@ -204,38 +208,102 @@ def _local_fat(image: Grid, skin: Skin) -> _Fat:
     return _Fat(vertices[chosen], values, skin.fat_intensity)
 
 
+def _fit_all(
+    fitter: Fitter, skin: Skin, starts_mm: FloatArray, diameters_mm: FloatArray
+) -> list[BlobFit]:
+    normals = skin_normals(skin, starts_mm)
+    fits = [
+        fitter.fit(start, float(diameter), normal)
+        for start, diameter, normal in zip(starts_mm, diameters_mm, normals, strict=True)
+    ]
+    return [fit for fit in fits if fit is not None]
+
+
 def _distinct(fits: list[BlobFit]) -> list[BlobFit]:
     """One fit for each blob: the one that explains most."""
     fits = sorted(fits, key=lambda fit: (-fit.explained, *fit.center_mm))
-    kept: list[BlobFit] = []
-    for fit in fits:
-        radius = float(np.prod(fit.radii_mm) ** (1 / 3))
-        if all(
-            np.linalg.norm(fit.center_mm - other.center_mm)
-            > 0.8 * max(radius, float(np.prod(other.radii_mm) ** (1 / 3)), 1.5)
-            for other in kept
-        ):
-            kept.append(fit)
-    return kept
+    centers = np.array([fit.center_mm for fit in fits]).reshape(-1, 3)
+    radii = np.array([max(float(np.prod(fit.radii_mm)) ** (1 / 3), 1.5) for fit in fits])
+    kept: list[int] = []
+    for index in range(len(fits)):
+        away = np.sqrt(((centers[kept] - centers[index]) ** 2).sum(axis=1))
+        if (away > 0.8 * np.maximum(radii[kept], radii[index])).all():
+            kept.append(index)
+    return [fits[index] for index in kept]
+
+
+@dataclass(frozen=True, eq=False, slots=True)
+class _Evidence:
+    """What is known of each blob, (N,) each."""
+
+    contrast: FloatArray
+    diameter_mm: FloatArray
+    roundness: FloatArray
+    height_mm: FloatArray
+    residual: FloatArray
+    explained: FloatArray
+    misfit: FloatArray
+    """Residual over the amplitude, without the noise's share."""
+
+    @classmethod
+    def of(cls, fits: list[BlobFit], skin: Skin, fat: _Fat) -> _Evidence:
+        centers = np.array([fit.center_mm for fit in fits])
+        radii = np.array([fit.radii_mm for fit in fits])
+        amplitude = np.array([fit.amplitude for fit in fits])
+        residual = np.array([fit.residual for fit in fits])
+        noise = skin.noise_sd / amplitude
+        return cls(
+            contrast=amplitude / fat.at(centers),
+            diameter_mm=2 * np.prod(radii, axis=1) ** (1 / 3),
+            roundness=radii[:, 0] / radii[:, 2],
+            height_mm=height_mm(skin, centers),
+            residual=residual,
+            explained=np.array([fit.explained for fit in fits]),
+            misfit=np.sqrt(np.maximum(residual**2 - noise**2, (0.2 * residual) ** 2)),
+        )
+
+    def judge(self, options: MarkerOptions) -> tuple[FloatArray, FloatArray]:
+        """Probability of each blob, and the looks of this scan's capsules."""
+        looks = np.stack(
+            [
+                np.log(self.contrast),
+                np.log(self.diameter_mm),
+                self.height_mm,
+                np.log(self.residual),
+                np.log(self.roundness),
+            ],
+            axis=1,
+        )
+        known = None if options.capsule_mm is None else float(np.log(options.capsule_mm))
+        return capsule_probability(looks, self.plausible(options), log_diameter=known)
+
+    def plausible(self, options: MarkerOptions) -> FloatArray:
+        """Plausibility of each blob by itself: soft limits of what a capsule can be."""
+        plausible: FloatArray = (
+            _above(np.log(self.contrast), np.log(options.least_contrast), 0.1)
+            * _above(-np.log(self.contrast), -np.log(2.5), 0.1)
+            * _above(self.diameter_mm, 3.0, 0.3)
+            * _above(-self.diameter_mm, -15.0, 0.5)
+            * _above(self.roundness, 0.33, 0.04)
+            # The centre of whatever lies on the skin is over it, even when pressed or shifted.
+            * _above(self.height_mm, max(options.shell_mm[0], 0.3), 0.4)
+            * _above(-self.height_mm, -options.shell_mm[1], 0.5)
+            * _above(self.explained, 0.6, 0.05)
+            * _above(-self.misfit, -0.2, 0.02)
+        )
+        return plausible
+
+
+def _above(value: FloatArray, limit: float, width: float) -> FloatArray:
+    step: FloatArray = 1 / (1 + np.exp(-np.clip((value - limit) / width, -50, 50)))
+    return step
 
 
 def _ranked(
-    volume: Volume, skin: Skin, fits: list[BlobFit], fat: _Fat, options: MarkerOptions
+    volume: Volume, fits: list[BlobFit], seen: _Evidence, options: MarkerOptions
 ) -> Markers:
     centers = np.array([fit.center_mm for fit in fits])
-    radii = np.array([fit.radii_mm for fit in fits])
-    contrast = np.array([fit.amplitude for fit in fits]) / fat.at(centers)
-    diameter = 2 * np.prod(radii, axis=1) ** (1 / 3)
-    roundness = radii[:, 0] / radii[:, 2]
-    height = height_mm(skin, centers)
-    residual = np.array([fit.residual for fit in fits])
-    explained = np.array([fit.explained for fit in fits])
-    prior = _plausible(contrast, diameter, roundness, height, residual, explained, options)
-    looks = np.stack(
-        [np.log(contrast), np.log(diameter), height, np.log(residual), np.log(roundness)], axis=1
-    )
-    known = None if options.capsule_mm is None else float(np.log(options.capsule_mm))
-    score, mean = capsule_probability(looks, prior, log_diameter=known)
+    score, mean = seen.judge(options)
     likely = int((score > 0.5).sum())
     if likely < options.at_least:
         raise MarkerError(_nothing(likely, options))
@@ -249,43 +317,14 @@ def _ranked(
     return Markers(
         centers_scanner_mm=centers[order],
         covariance_mm2=covariance[order],
-        diameter_mm=diameter[order],
-        contrast=contrast[order],
-        roundness=roundness[order],
-        skin_mm=height[order],
+        diameter_mm=seen.diameter_mm[order],
+        contrast=seen.contrast[order],
+        roundness=seen.roundness[order],
+        skin_mm=seen.height_mm[order],
         score=score[order],
         capsule_mm=capsule,
         shift_mm=np.zeros(3),
     )
-
-
-def _plausible(
-    contrast: FloatArray,
-    diameter: FloatArray,
-    roundness: FloatArray,
-    height: FloatArray,
-    residual: FloatArray,
-    explained: FloatArray,
-    options: MarkerOptions,
-) -> FloatArray:
-    """Plausibility of each blob by itself: soft limits of what a capsule can be."""
-
-    def above(value: FloatArray, limit: float, width: float) -> FloatArray:
-        step: FloatArray = 1 / (1 + np.exp(-np.clip((value - limit) / width, -50, 50)))
-        return step
-
-    plausible: FloatArray = (
-        above(np.log(contrast), np.log(options.least_contrast), 0.1)
-        * above(-np.log(contrast), -np.log(2.5), 0.1)
-        * above(diameter, 3.0, 0.3)
-        * above(-diameter, -15.0, 0.5)
-        * above(roundness, 0.3, 0.04)
-        * above(height, options.shell_mm[0], 0.5)
-        * above(-height, -options.shell_mm[1], 0.5)
-        * above(explained, 0.6, 0.06)
-        * above(-residual, -0.25, 0.03)
-    )
-    return plausible
 
 
 def _nothing(likely: int, options: MarkerOptions) -> str:

@@ -10,13 +10,23 @@ from scipy import ndimage
 from scipy.special import ndtr
 
 from locator.geometry import apply_affine
-from locator.skin import Skin, skin_normals
+from locator.skin import Skin
 from locator.volume import Volume
 
 FloatArray = NDArray[np.float64]
 
 N_SHAPE = 9
 """Three numbers for the centre, six for the ellipsoid."""
+
+LEFT_OUT_MM = 1.0
+"""Voxels deeper under the skin than this do not take part in a fit."""
+
+LEAST_VOXELS = 20
+"""A fit with fewer voxels than this says nothing."""
+
+HOPELESS = {0: 0.1, 4: 0.35}
+"""Share of the variance that a blob must explain at the start and after four steps; a capsule
+explains 0.8 and more."""
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
@@ -83,6 +93,7 @@ class _Window:
     values: FloatArray
     weight: FloatArray
     surroundings: FloatArray
+    unexplained: float
 
 
 class Fitter:
@@ -99,7 +110,12 @@ class Fitter:
         self._blur = box @ box.T + settings.blur_mm**2 * np.eye(3)
 
     def fit(
-        self, center_mm: FloatArray, diameter_mm: float, *, iterations: int = 15
+        self,
+        center_mm: FloatArray,
+        diameter_mm: float,
+        normal: FloatArray,
+        *,
+        iterations: int = 12,
     ) -> BlobFit | None:
         """Fit one blob, starting from a centre and a diameter.
 
@@ -109,20 +125,24 @@ class Fitter:
             Start, scanner mm.
         diameter_mm : float
             Expected diameter, mm.
+        normal : (3,) ndarray
+            Outward direction of the skin nearby.
         iterations : int
             At most so many steps.
 
         Returns
         -------
         BlobFit or None
-            None when the fit leaves its start or finds nothing bright.
+            None when nothing like a blob is there, or the fit leaves its start.
         """
-        window = self._window(center_mm, diameter_mm)
+        window = self._window(center_mm, diameter_mm, normal)
         if window is None:
             return None
         return self._descend(window, center_mm, diameter_mm, iterations)
 
-    def _window(self, center_mm: FloatArray, diameter_mm: float) -> _Window | None:
+    def _window(
+        self, center_mm: FloatArray, diameter_mm: float, normal: FloatArray
+    ) -> _Window | None:
         reach = 0.5 * diameter_mm * 1.45 + 2.5
         middle = apply_affine(self._voxel_from_scanner, center_mm)
         span = reach * np.sqrt((self._voxel_from_scanner[:3, :3] ** 2).sum(axis=1))
@@ -133,9 +153,8 @@ class Fitter:
             return None
         index = np.indices(high - low).reshape(3, -1).T + low
         points = apply_affine(self.volume.scanner_from_voxel, index) - center_mm
-        near = (points**2).sum(axis=1) < reach**2
+        near = np.einsum("ij,ij->i", points, points) < reach**2
         index, points = index[near], points[near]
-        values = self.volume.intensity[tuple(index.T)].astype(np.float64)
         height = ndimage.map_coordinates(
             self.skin.height_map_mm,
             apply_affine(self._grid_from_voxel, index).T,
@@ -143,39 +162,41 @@ class Fitter:
             mode="nearest",
             output=np.float64,
         )
-        # Under the skin anything can be; it counts almost nothing.
-        weight = 0.02 + 0.98 * np.clip((height + 1.0) / 1.0, 0, 1)
-        normal = skin_normals(self.skin, center_mm)[0]
+        # Under the skin anything can be: it is left out.
+        out = height > -LEFT_OUT_MM
+        if out.sum() < LEAST_VOXELS:
+            return None
+        index, points, height = index[out], points[out], height[out]
+        values = self.volume.intensity[tuple(index.T)].astype(np.float64)
+        weight = np.clip(0.1 + height + LEFT_OUT_MM, 0.1, 1)
         spread = np.sqrt(normal @ self._blur @ normal + self.settings.skin_sd_mm**2)
-        inside = ndtr(-height / spread)
-        edge = np.exp(-0.5 * (height / spread) ** 2)
-        first, second = _tangents(normal)
-        along, across = points @ first / reach, points @ second / reach
         columns = [np.ones(len(points))]
+        inside = ndtr(-height / spread)
         if inside.max() > 0.05:
+            edge = np.exp(-0.5 * (height / spread) ** 2)
+            first, second = _tangents(normal)
+            along, across = points @ first / reach, points @ second / reach
             columns += [inside, inside * along, inside * across, edge, edge * along, edge * across]
-        return _Window(points, values, weight, np.stack(columns, axis=1))
+        surroundings = np.stack(columns, axis=1)
+        weighted = surroundings * weight[:, None]
+        alone = _ridged(weighted.T @ surroundings)
+        plain = values - surroundings @ np.linalg.solve(alone, weighted.T @ values)
+        return _Window(points, values, weight, surroundings, float(weight @ plain**2))
 
     def _descend(
         self, window: _Window, start_mm: FloatArray, diameter_mm: float, iterations: int
     ) -> BlobFit | None:
         """Levenberg-Marquardt over centre and shape; the rest is linear at every step."""
-        settings = self.settings
         center = np.zeros(3)
         inverse_shape = np.eye(3) * (2 / diameter_mm)
         damping = 1e-2
-        noise = max(settings.noise_sd, 1e-6 * float(np.abs(window.values).max()), 1e-12)
+        noise = max(self.settings.noise_sd, 1e-6 * float(np.abs(window.values).max()), 1e-12)
         state = self._evaluate(window, center, inverse_shape, noise, diameter_mm)
-        for _ in range(iterations):
-            amplitude = state.linear[0]
-            sd2 = noise**2 + (settings.model_error * amplitude) ** 2
-            jacobian = np.concatenate(
-                [amplitude * state.slope, state.blob[:, None], window.surroundings], axis=1
-            )
-            weighted = jacobian * (window.weight / sd2)[:, None]
-            normal = weighted.T @ jacobian
-            right = weighted.T @ state.residual
-            prior, pull = self._prior(inverse_shape, diameter_mm, normal.shape[0])
+        for iteration in range(iterations):
+            if iteration in (0, 4) and self._explained(window, state) < HOPELESS[iteration]:
+                return None
+            normal, right = self._equations(window, state, noise)
+            prior, pull = self._prior(state.log_radii, len(normal))
             normal += prior
             right += pull
             diagonal = np.diag(normal).copy()
@@ -185,7 +206,8 @@ class Fitter:
                     normal + np.diag(damping * diagonal + 1e-12 * diagonal.max()), right
                 )
                 turn = np.clip(step[3:N_SHAPE], -0.3, 0.3)
-                move = step[:3] * min(1.0, 1.5 / max(float(np.linalg.norm(step[:3])), 1e-9))
+                length = float(np.sqrt(step[:3] @ step[:3]))
+                length, move = min(length, 1.5), step[:3] * min(1.0, 1.5 / max(length, 1e-9))
                 trial_center = center + move
                 trial_shape = (np.eye(3) + _symmetric(turn)) @ inverse_shape
                 trial = self._evaluate(window, trial_center, trial_shape, noise, diameter_mm)
@@ -198,33 +220,40 @@ class Fitter:
             gain = state.cost - trial.cost
             center, inverse_shape, state = trial_center, trial_shape, trial
             damping = max(damping / 6, 1e-6)
-            if np.linalg.norm(center) > 0.75 * diameter_mm:
+            if center @ center > (0.75 * diameter_mm) ** 2:
                 return None
-            if np.linalg.norm(move) < 0.003 and gain < 1e-3 * state.cost:
+            if length < 0.01 and gain < 1.0:
                 break
         return self._result(window, start_mm, center, inverse_shape, state, noise)
 
-    def _prior(
-        self, inverse_shape: FloatArray, diameter_mm: float, size: int
+    def _equations(
+        self, window: _Window, state: _State, noise: float
     ) -> tuple[FloatArray, FloatArray]:
+        """Gauss-Newton equations, the linear part eliminated by being in them."""
+        amplitude = state.linear[0]
+        sd2 = noise**2 + (self.settings.model_error * amplitude) ** 2
+        jacobian = np.concatenate([amplitude * state.slope, state.columns], axis=1)
+        weighted = jacobian * (window.weight / sd2)[:, None]
+        return weighted.T @ jacobian, weighted.T @ state.residual
+
+    @staticmethod
+    def _explained(window: _Window, state: _State) -> float:
+        if state.linear[0] <= 0:
+            return 0.0
+        left = float(window.weight @ state.residual**2)
+        return 1 - left / max(window.unexplained, 1e-30)
+
+    def _prior(self, log_radii: FloatArray, size: int) -> tuple[FloatArray, FloatArray]:
         """Precision and pull of the expected size and shape, for a multiplicative step."""
         settings = self.settings
         prior = np.zeros((size, size))
         pull = np.zeros(size)
-        log_radii = -_log_symmetric(inverse_shape) - np.log(diameter_mm / 2) * np.eye(3)
-        mean = np.trace(log_radii) / 3
-        away = log_radii - mean * np.eye(3)
+        mean = (log_radii[0, 0] + log_radii[1, 1] + log_radii[2, 2]) / 3
         # A step E multiplies the inverse shape: the log radii change by -E.
-        common = np.zeros(6)
-        common[:3] = 1 / 3
-        prior[3:9, 3:9] += np.outer(common, common) / settings.log_radius_sd**2
-        pull[3:9] += common * mean / settings.log_radius_sd**2
-        centred = np.eye(6)
-        centred[:3, :3] -= 1 / 3
-        centred[3:, 3:] *= 2
-        prior[3:9, 3:9] += centred / settings.log_shape_sd**2
-        values = np.array([away[i, j] for i, j in _PAIRS])
-        pull[3:9] += centred @ values / settings.log_shape_sd**2
+        prior[3:9, 3:9] = _COMMON / settings.log_radius_sd**2 + _CENTRED / settings.log_shape_sd**2
+        pull[3:6] = mean / 3 / settings.log_radius_sd**2
+        values = np.array([log_radii[i, j] for i, j in _PAIRS])
+        pull[3:9] += _CENTRED @ values / settings.log_shape_sd**2
         return prior, pull
 
     def _evaluate(
@@ -238,22 +267,22 @@ class Fitter:
         blob, slope = self._blob(window.points - center, inverse_shape)
         columns = np.concatenate([blob[:, None], window.surroundings], axis=1)
         weighted = columns * window.weight[:, None]
-        normal = weighted.T @ columns
-        normal[np.diag_indices_from(normal)] += 1e-3 + 1e-6 * np.trace(normal)
-        linear = np.linalg.solve(normal, weighted.T @ window.values)
+        right = weighted.T @ window.values
+        linear: FloatArray = np.linalg.solve(_ridged(weighted.T @ columns), right).astype(
+            np.float64
+        )
         residual = window.values - columns @ linear
         settings = self.settings
         sd2 = noise**2 + (settings.model_error * linear[0]) ** 2
         log_radii = -_log_symmetric(inverse_shape) - np.log(diameter_mm / 2) * np.eye(3)
-        mean = np.trace(log_radii) / 3
-        away = log_radii - mean * np.eye(3)
+        mean = (log_radii[0, 0] + log_radii[1, 1] + log_radii[2, 2]) / 3
         cost = (
             float(window.weight @ residual**2) / sd2
             + len(residual) * np.log(sd2)
             + mean**2 / settings.log_radius_sd**2
-            + float((away**2).sum()) / settings.log_shape_sd**2
+            + (float((log_radii**2).sum()) - 3 * mean**2) / settings.log_shape_sd**2
         )
-        return _State(blob, slope, linear, residual, cost)
+        return _State(columns, slope, linear, residual, log_radii, cost)
 
     def _blob(self, offset: FloatArray, inverse_shape: FloatArray) -> tuple[FloatArray, FloatArray]:
         """Blurred ellipsoid of brightness 1 and its slopes in centre and shape."""
@@ -262,7 +291,7 @@ class Fitter:
         gradient = (y @ inverse_shape) / rho[:, None]
         steep = np.sqrt((gradient**2).sum(axis=1) + 1e-12)
         outward = gradient / steep[:, None]
-        blur = np.sqrt(np.einsum("ni,ij,nj->n", outward, self._blur, outward))
+        blur = np.sqrt(((outward @ self._blur) * outward).sum(axis=1))
         z = (1 - rho) / (steep * blur)
         blob = ndtr(z)
         bell = np.exp(-0.5 * z**2) / np.sqrt(2 * np.pi) / (steep * blur)
@@ -286,47 +315,46 @@ class Fitter:
         if amplitude <= 0:
             return None
         radii = 1 / np.linalg.svd(inverse_shape, compute_uv=False)
-        counted = window.weight.sum()
-        variance = float(window.weight @ state.residual**2) / max(counted - 12, 1.0)
-        jacobian = np.concatenate(
-            [amplitude * state.slope, state.blob[:, None], window.surroundings], axis=1
-        )
-        variance = max(variance, noise**2)
+        left = float(window.weight @ state.residual**2)
+        variance = max(left / max(window.weight.sum() - 12, 1.0), noise**2)
+        jacobian = np.concatenate([amplitude * state.slope, state.columns], axis=1)
         normal = (jacobian * window.weight[:, None]).T @ jacobian / variance
-        prior, _ = self._prior(inverse_shape, 2 * float(np.prod(radii)) ** (1 / 3), len(normal))
+        prior, _ = self._prior(state.log_radii, len(normal))
         normal += prior
         normal[np.diag_indices_from(normal)] += 1e-9 * np.trace(normal)
         covariance = np.linalg.inv(normal)[:3, :3]
-        # Against the surroundings alone, where the blob is.
-        weighted = window.surroundings * window.weight[:, None]
-        alone = weighted.T @ window.surroundings
-        alone[np.diag_indices_from(alone)] += 1e-3 + 1e-6 * np.trace(alone)
-        plain = window.values - window.surroundings @ np.linalg.solve(
-            alone, weighted.T @ window.values
-        )
-        explained = 1 - float(window.weight @ state.residual**2) / max(
-            float(window.weight @ plain**2), 1e-30
-        )
         return BlobFit(
             center_mm=start_mm + center,
             covariance_mm2=(covariance + covariance.T) / 2,
             amplitude=amplitude,
             radii_mm=np.sort(radii),
-            explained=explained,
+            explained=self._explained(window, state),
             residual=float(np.sqrt(variance)) / amplitude,
         )
 
 
 @dataclass(frozen=True, eq=False, slots=True)
 class _State:
-    blob: FloatArray
+    columns: FloatArray
     slope: FloatArray
     linear: FloatArray
     residual: FloatArray
+    log_radii: FloatArray
     cost: float
 
 
 _PAIRS = ((0, 0), (1, 1), (2, 2), (0, 1), (0, 2), (1, 2))
+
+_COMMON = np.zeros((6, 6))
+_COMMON[:3, :3] = 1 / 9
+_CENTRED = np.diag([1.0, 1, 1, 2, 2, 2])
+_CENTRED[:3, :3] -= 1 / 3
+
+
+def _ridged(normal: FloatArray) -> FloatArray:
+    """The same equations, solvable when columns vanish in this window."""
+    normal[np.diag_indices_from(normal)] += 1e-3 + 1e-6 * np.trace(normal)
+    return normal
 
 
 def _symmetric(values: FloatArray) -> FloatArray:

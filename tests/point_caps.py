@@ -54,11 +54,11 @@ def make_point_head(
 
     def radius(out: Array) -> Array:
         reach = np.full(len(out), 90.0)
-        for _ in range(40):
+        for _ in range(16):
             place = out * reach[:, None] / half
             place[:, 0] /= 1 - egg * np.clip(place[:, 1], -1.2, 1.2)
             size = (np.abs(place) ** exponent).sum(axis=1) ** (1 / exponent)
-            reach = reach * (0.5 + 0.5 / size)
+            reach = reach * (0.25 + 0.75 / size)
         reach = reach + (np.exp((out @ ways.T - 1) / 0.12) * heights).sum(axis=1)
         # The root of the nose (a notch) and the nose under it.
         front = out[:, 1] > 0
@@ -76,7 +76,7 @@ def make_point_head(
     def from_center(out: Array) -> Array:
         """Distance from the inner centre along unit directions: a few steps from the origin's."""
         reach = np.full(len(out), 100.0)
-        for _ in range(25):
+        for _ in range(14):
             point = center + reach[:, None] * out
             length = np.linalg.norm(point, axis=1)
             reach = reach + 0.7 * (radius(point / length[:, None]) - length)

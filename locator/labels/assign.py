@@ -16,7 +16,7 @@ from locator.labels.matching import Evidence
 from locator.labels.result import Electrodes
 from locator.labels.search import Search, name_spacing_mm, search_cap
 from locator.layout import Layout
-from locator.layout.tape import StarSurface, tape_places
+from locator.layout.tape import tape_places
 from locator.markers import Markers
 from locator.results import Finding, Progress
 from locator.skin import Skin, height_mm, project_to_skin, skin_normals
@@ -198,7 +198,7 @@ _LEAST_SCORE = 0.02
 _HALF_TURN = np.diag([-1.0, -1.0, 1.0])
 # A cap worn back to front: about one in ten thousand (no source; common sense).
 _BACK_TO_FRONT_LOG_ODDS = -9.0
-# Caps sit on heads; a fit below this share of names is no fit.
+# Where a side marker may be: near an ear, and worn by no name.
 _SIDE_REACH_MM = 75.0
 
 
@@ -401,7 +401,6 @@ def _electrodes(
 
     # Where the fitted layout expects the contact points, on the detailed skin.
     fitted = project_to_skin(skin, best.places)
-    offset = fitted - best.places
     centers = np.asarray(markers.centers_scanner_mm)
     positions = fitted.copy()
     positions[seen] = contacts[marker[seen]]
@@ -445,9 +444,7 @@ def _electrodes(
         _alternatives(index, names, search, marker, usable) for index in range(n_names)
     )
     why_not = _why_not(markers, names, search, marker, usable, fitted, heights, looks)
-    side_basis, side_findings = _sides(
-        markers, options, anatomy, marker, fitted, heights, looks, layout
-    )
+    side_basis, side_findings = _sides(markers, options, anatomy, marker, looks)
     findings = _findings(
         options,
         layout,
@@ -468,7 +465,6 @@ def _electrodes(
         options.doubt_below,
         best.jitter_mm,
     )
-    del offset
     return Electrodes(
         names=names,
         positions_scanner_mm=positions,
@@ -573,10 +569,7 @@ def _sides(
     options: LabelOptions,
     anatomy: Anatomy,
     marker: NDArray[np.int32],
-    fitted: FloatArray,
-    heights: FloatArray,
     looks: FloatArray,
-    layout: Layout,
 ) -> tuple[str, list[Finding]]:
     """What left and right rest on; a side marker must agree with the image."""
     basis = "the image's affine (scanner axes)"
@@ -584,10 +577,9 @@ def _sides(
         basis += ", and the given LPA and RPA agree"
     if options.side_marker is None:
         return f"{basis}; no side marker", []
-    del heights, layout
     free = np.setdiff1d(np.arange(len(markers.score)), marker[marker >= 0])
     centers = np.asarray(markers.centers_scanner_mm)
-    right, ahead, above = anatomy.axes
+    right, _, above = anatomy.axes
     ears = anatomy.landmarks_mm[1:3]
     middle = ears.mean(axis=0)
     found: dict[str, list[int]] = {"right": [], "left": []}
@@ -598,10 +590,8 @@ def _sides(
         lateral = abs(float(away @ right)) > 0.5 * abs(float((ear - middle) @ right))
         low = float(away @ above) < 35.0
         near = float(np.linalg.norm(centers[row] - ear)) < _SIDE_REACH_MM
-        apart = float(np.linalg.norm(fitted - centers[row], axis=1).min()) > 12.0
-        if lateral and low and near and apart and looks[row] > -1.5 and markers.score[row] > 0.3:
+        if lateral and low and near and looks[row] > -1.5 and markers.score[row] > 0.3:
             found[side].append(int(row))
-    del ahead
     other = "left" if options.side_marker == "right" else "right"
     here, there = found[options.side_marker], found[other]
     if there and not here:
@@ -762,8 +752,3 @@ def _findings(
             )
         )
     return findings
-
-
-def surface_of(anatomy: Anatomy) -> StarSurface:
-    """The smooth head of an anatomy, for pictures of the nominal places."""
-    return anatomy.surface

@@ -8,9 +8,17 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 from scipy.optimize import linear_sum_assignment
+from scipy.spatial import cKDTree
 
 from locator.labels.cap import CapModel
-from locator.labels.matching import Evidence, Fit, fit_cap, match_sum, pair_log_weights
+from locator.labels.matching import (
+    HOLDER_REACH_MM,
+    Evidence,
+    Fit,
+    fit_cap,
+    match_sum,
+    pair_log_weights,
+)
 
 FloatArray = NDArray[np.float64]
 
@@ -174,7 +182,8 @@ def refine(fit: Fit, evidence: Evidence, *, reach_mm: float = 25.0) -> Evidence:
     taken_points = fit.share.sum(axis=0)
     gap = np.linalg.norm(evidence.points[:, None] - fit.places[None], axis=2).min(axis=1)
     near = gap < reach_mm
-    area = cap_area_mm2(fit.places, reach_mm)
+    occupied = np.concatenate([fit.places[taken_names < 0.5], evidence.points[taken_points >= 0.5]])
+    area = cap_area_mm2(fit.places, reach_mm, occupied)
     # Blobs that look unlike capsules count by how alike they look: only what could pass for a
     # capsule competes with one.
     alike = np.exp(np.minimum(evidence.log_ratio[near], 0.0))
@@ -187,21 +196,33 @@ def refine(fit: Fit, evidence: Evidence, *, reach_mm: float = 25.0) -> Evidence:
     )
 
 
-def cap_area_mm2(places: FloatArray, reach_mm: float) -> float:
-    """Area of skin within `reach_mm` of a place: from random-free counting on a sphere grid."""
-    center = places.mean(axis=0)
+def cap_area_mm2(places: FloatArray, reach_mm: float, occupied: FloatArray) -> float:
+    """Area of skin within `reach_mm` of a place that is left free by the electrodes, mm^2.
+
+    Counted on a spiral of 4000 points on the sphere through the places. At least a fifth of the
+    whole is taken as free, so that dense caps keep a finite density of strays.
+    """
     number = 4000
     index = np.arange(number) + 0.5
     height = 1 - 2 * index / number
     azimuth = np.pi * (1 + 5**0.5) * index
     flat = np.sqrt(1 - height**2)
-    # Centre of the sphere through the places (least squares), and its radius.
+    # Centre and radius of the least-squares sphere.
     design = np.c_[2 * places, np.ones(len(places))]
     solution, *_ = np.linalg.lstsq(design, (places**2).sum(axis=1), rcond=None)
-    radius = float(np.sqrt(max(solution[3] + solution[:3] @ solution[:3], 1.0)))
-    if len(places) < 4 or not 50.0 < radius < 200.0:
-        solution[:3], radius = center, 90.0
-    grid = solution[:3] + radius * np.c_[flat * np.cos(azimuth), flat * np.sin(azimuth), height]
-    gap2 = ((grid[:, None] - places[None]) ** 2).sum(axis=2).min(axis=1)
-    share = float((gap2 < (reach_mm + 10.0) ** 2).mean())
-    return max(share, 0.02) * 4 * np.pi * radius**2
+    center = solution[:3]
+    radius = float(np.sqrt(max(solution[3] + center @ center, 1.0)))
+    if len(places) < 5 or not 50.0 < radius < 150.0:
+        center, radius = places.mean(axis=0), 90.0
+    out = np.c_[flat * np.cos(azimuth), flat * np.sin(azimuth), height]
+
+    def nearest(points: FloatArray) -> FloatArray:
+        away = points - center
+        away = center + away * (radius / np.linalg.norm(away, axis=1, keepdims=True))
+        found, _ = cKDTree(away).query(center + radius * out)
+        return np.asarray(found, dtype=np.float64)
+
+    within = nearest(places) < reach_mm
+    free = within & (nearest(occupied) > HOLDER_REACH_MM) if len(occupied) else within
+    share = max(float(free.mean()), 0.2 * float(within.mean()), 0.01)
+    return share * 4 * np.pi * radius**2

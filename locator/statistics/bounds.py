@@ -104,7 +104,10 @@ def group_filters(weights: FloatArray, covariance_uv2: FloatArray) -> FilterGrou
     white = weights @ colour
     n_groups = max(1, n_sources // MEMBERS)
     places = np.linspace(0, n_sources - 1, n_groups).round().astype(int)
-    patterns = np.linalg.svd(white[places], full_matrices=False)[2]
+    axes = np.linalg.svd(white[places], full_matrices=False)[2]
+    # Under three electrodes there are fewer than three directions.
+    patterns = np.zeros((n_groups, 3, n_electrodes))
+    patterns[:, : axes.shape[1]] = axes
     group = _assign(white, patterns)
     for _ in range(ROUNDS):
         gram = np.zeros((n_groups, n_electrodes, n_electrodes))
@@ -113,7 +116,7 @@ def group_filters(weights: FloatArray, covariance_uv2: FloatArray) -> FilterGrou
             gram[number] = members.T @ members
         found = np.linalg.eigh(gram)[1][:, :, -3:].transpose(0, 2, 1)
         there = np.isin(np.arange(n_groups), group)
-        patterns[there] = found[there]
+        patterns[there, : found.shape[1]] = found[there]
         group = _assign(white, patterns)
     used, group = np.unique(group, return_inverse=True)
     patterns = patterns[used]

@@ -111,7 +111,7 @@ def _spline_weights(offsets: FloatArray, normal: FloatArray) -> FloatArray | Non
     right[:n] = np.linalg.norm(flat, axis=1) ** 3
     right[n] = 1.0
     try:
-        weights = np.linalg.solve(system, right)[:n]
+        weights = np.asarray(np.linalg.solve(system, right)[:n], dtype=np.float64)
     except np.linalg.LinAlgError:
         return None
     # A smooth interpolant on a sane mesh stays near 1.2; folds of the chart give large weights.

@@ -167,9 +167,10 @@ def plane_segments(surface: Surface, plane: str, center_scanner_mm: ArrayLike) -
     ends = []
     for a, b in ((0, 1), (1, 2), (2, 0)):
         first, second = triangles[:, a], triangles[:, b]
-        share = side[first] / (side[first] - side[second])
-        crossing = points[first] + share[:, None] * (points[second] - points[first])
-        crossing[(side[first] > 0) == (side[second] > 0)] = np.nan
+        crosses = (side[first] > 0) != (side[second] > 0)
+        step = np.where(crosses, side[first] - side[second], 1.0)
+        crossing = points[first] + (side[first] / step)[:, None] * (points[second] - points[first])
+        crossing[~crosses] = np.nan
         ends.append(crossing)
     stacked = np.stack(ends, axis=1)
     valid = np.isfinite(stacked[..., 0])

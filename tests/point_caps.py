@@ -44,13 +44,13 @@ def make_point_head(
         else [rng.normal(154.3, 5.5), rng.normal(199.5, 7.0), 0.0]
     )
     half[2] = rng.normal(126.5, 6.5) if woman else rng.normal(131.1, 6.2)
-    exponent = rng.uniform(2.05, 2.5)
+    exponent = rng.uniform(2.05, 2.4)
     egg = rng.uniform(0.05, 0.18)
     ear_y = rng.normal(3.0, 4.0)
     nose_z = rng.normal(13.0, 5.0)
     ways = rng.normal(size=(14, 3))
     ways /= np.linalg.norm(ways, axis=1, keepdims=True)
-    heights = rng.normal(0, 1.5, 14)
+    heights = rng.normal(0, 1.2, 14)
 
     def radius(out: Array) -> Array:
         reach = np.full(len(out), 90.0)
@@ -95,8 +95,10 @@ def make_point_head(
     shift = rng.normal(0, 8.0, 3)
     vertices = vertices @ turn.T + shift
     tree = cKDTree(vertices)
+    # Between three mesh vertices, as a landmark that a person has marked would be.
     landmarks = {
-        name: vertices[tree.query(turn @ (point * 1.0) + shift)[1]] for name, point in marks.items()
+        name: vertices[tree.query(turn @ point + shift, k=3)[1]].mean(axis=0)
+        for name, point in marks.items()
     }
     low = vertices.min(axis=0) - 25.0
     shape = np.ceil((vertices.max(axis=0) + 25.0 - low) / grid_mm).astype(int) + 1

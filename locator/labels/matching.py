@@ -23,7 +23,6 @@ from dataclasses import dataclass, field
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.stats import ncx2
 
 from locator.labels.cap import CapModel
 
@@ -224,31 +223,11 @@ def _best_jitter(total: float, count: float) -> float:
 
 # An electrode without capsule still has its holder: no stray blob lies closer than this to it.
 HOLDER_REACH_MM = 12.0
-# The least that this argument may weigh: a blob may stick to a bare holder after all.
-_LEAST_ROOM = 0.1
-
-
-def _log_room(
-    places: FloatArray, variance: FloatArray, share: FloatArray, evidence: Evidence
-) -> FloatArray:
-    """Log probability (E,) that a name without capsule leaves room for the stray blobs near it.
-
-    The name is somewhere about its expected place (Gaussian, `variance` per axis); a blob that
-    is no electrode must lie beyond the holder. Blobs count as far as other names leave them over
-    and as they look like capsules at all.
-    """
-    gap2 = ((evidence.points[None] - places[:, None]) ** 2).sum(axis=2)
-    rows, columns = np.nonzero(gap2 < (2.5 * HOLDER_REACH_MM) ** 2)
-    log_room = np.zeros(len(places))
-    if len(rows) == 0:
-        return log_room
-    here = variance[rows]
-    room = ncx2.sf(HOLDER_REACH_MM**2 / here, 2, np.maximum(gap2[rows, columns] / here, 1e-6))
-    others = share.sum(axis=0)[columns] - share[rows, columns]
-    over = np.clip(1.0 - others, 0.0, 1.0)
-    over = over * np.exp(np.minimum(evidence.log_ratio[columns], 0.0))
-    np.add.at(log_room, rows, over * np.log(np.maximum(room, 1e-3)))
-    return np.maximum(log_room, np.log(_LEAST_ROOM))
+# Odds of every label are divided by this before they are stated: densities of strays and absent
+# capsules are estimates from one cap. From simulated caps over many heads (jitter 4 mm, 6 off,
+# 8 extra): without it labels stated at 0.93 were right in 0.80, with it stated and true agree to
+# 0.05, on the cautious side.
+_CAUTION = 3.0
 
 
 def finish_fit(
@@ -273,11 +252,8 @@ def finish_fit(
         - 0.5 * np.log(4 * max(float(taken.sum()), 1.0) + 1 / _JITTER_LOG_SD**2)
     )
     spread = (slopes @ covariance) @ slopes.transpose(0, 2, 1)
-    weights = pair_log_weights(places, spread, jitter, evidence)
+    weights = pair_log_weights(places, spread, jitter, evidence) - np.log(_CAUTION)
     share, _ = match_sum(weights)
-    variance = jitter**2 + 0.5 * np.trace(spread, axis1=1, axis2=2)
-    for _ in range(2):
-        share, _ = match_sum(weights - _log_room(places, variance, share, evidence)[:, None])
     return Fit(
         model=model,
         parameters=parameters,

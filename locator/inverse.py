@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import logging
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import Literal
 
 import numpy as np
@@ -70,9 +70,9 @@ class Inverse(Frozen):
     lambda2: float
     snr: float
     n_average: int
-    noise_norm_per_nam: FloatArray
-    depth_prior: FloatArray
-    normals: FloatArray
+    noise_norm_per_nam: FloatArray = field(default_factory=lambda: np.ones(0))
+    depth_prior: FloatArray = field(default_factory=lambda: np.ones(0))
+    normals: FloatArray = field(default_factory=lambda: np.full((0, 3), np.nan))
     orientation: str = "free"
     loose: float = 1.0
     shrinkage: float = 0.0

@@ -269,7 +269,12 @@ def make_cap(
     _check(worn, settings)
     rng = np.random.default_rng([int(seed), 0xCA9])
     marks = {name: np.asarray(point, dtype=np.float64) for name, point in landmarks_mm.items()}
-    skin = Skin(vertices_mm, faces)
+    lacking = [name for name in ("NAS", "INI", "LPA", "RPA") if name not in marks]
+    if lacking:
+        msg = f"A cap needs the landmark(s) {', '.join(lacking)}."
+        raise ValueError(msg)
+    ears = np.array([marks["LPA"], marks["RPA"]])
+    skin = Skin(vertices_mm, faces).without_thin_parts(ears)
     places = all_places(vertices_mm, faces, marks, lower=needs_lower(worn), skin=skin)
     unknown = [name for name in worn if name not in places]
     if unknown:
@@ -401,7 +406,9 @@ def _draw_extras(
     usable &= (depth < 0.55 * float((nasion - center) @ front)) | (height > brow + 15.0)
     # not on the cut through the neck
     usable &= (skin.normals @ up > -0.6) & (height > height.min() + 12.0)
-    pool = np.flatnonzero(usable)
+    on_skin = np.zeros(len(vertices), dtype=bool)
+    on_skin[skin.faces] = True  # not on an ear
+    pool = np.flatnonzero(usable & on_skin)
     pool = pool[rng.permutation(len(pool))]
     nearest = np.concatenate(
         [np.linalg.norm(vertices[part][:, None] - contacts[None], axis=2).min(axis=1)

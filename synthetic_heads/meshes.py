@@ -100,9 +100,50 @@ class Skin:
         self.vertices = np.asarray(vertices_mm, dtype=np.float64)
         self.faces = np.asarray(faces)
         self.normals = vertex_normals(self.vertices, self.faces)
+        self._index()
+
+    def _index(self) -> None:
         self._corners = self.vertices[self.faces]
         self._tree = cKDTree(self._corners.mean(axis=1))
-        self._vertex_tree = cKDTree(self.vertices)
+        self._used = np.unique(self.faces)
+        self._vertex_tree = cKDTree(self.vertices[self._used])
+
+    def without_thin_parts(
+        self, places_mm: ArrayLike, reach_mm: float = 60.0, thick_mm: float = 9.0
+    ) -> Skin:
+        """The same skin without what is a thin plate there: the ears.
+
+        Parameters
+        ----------
+        places_mm : (N, 3) array_like
+            Where to look (the preauricular points), mm.
+        reach_mm : float
+            How far round them, mm.
+        thick_mm : float
+            A plate thinner than this is left out, mm.
+
+        Returns
+        -------
+        Skin
+            Fewer faces, the same vertices and normals.
+        """
+        near = self._used[
+            np.unique(np.concatenate(self._vertex_tree.query_ball_point(places_mm, reach_mm)))
+            .astype(int)
+        ]  # fmt: skip
+        thin = np.zeros(len(self.vertices), dtype=bool)
+        for depth in (0.6 * thick_mm, thick_mm):
+            below = self.vertices[near] - depth * self.normals[near]
+            _, other = self._vertex_tree.query(below)
+            other = self._used[other]
+            # the place below the skin lies outside again
+            height = np.einsum("ij,ij->i", below - self.vertices[other], self.normals[other])
+            thin[near[height > 0.3]] = True
+        bare = object.__new__(Skin)
+        bare.vertices, bare.normals = self.vertices, self.normals
+        bare.faces = self.faces[~thin[self.faces].any(axis=1)]
+        bare._index()
+        return bare
 
     def closest(self, points_mm: ArrayLike) -> Array:
         """Closest points on the skin, (N, 3), mm."""
@@ -122,9 +163,10 @@ class Skin:
         points = np.atleast_2d(np.asarray(points_mm, dtype=np.float64))
         found = np.zeros_like(points)
         _, first = self._vertex_tree.query(points)
+        normals = self.normals[self._used]
         for index, near in enumerate(self._vertex_tree.query_ball_point(points, radius_mm)):
-            own = self.normals[first[index]]
-            around = self.normals[near] if near else own[None]
+            own = normals[first[index]]
+            around = normals[near] if near else own[None]
             # the other side of an ear or a fold is no part of the pad's rest
             around = around[around @ own > 0.3]
             found[index] = around.sum(axis=0) if len(around) else own

@@ -16,6 +16,7 @@ Electroencephalogr Clin Neurophysiol Suppl 52:3-6; Acharya JN et al. 2016, J Cli
 5. The chain 9/10: straight down the skin from the ends of the rows by 10 % of the coronal tape
    (9h/10h: 5 %); so also I1, OI1 under O1, and Iz, OIz under Oz on the midline tape.
 
+No tape and no electrode goes over an ear: thin plates near the preauricular points are left out.
 A tape is taut: in the plane of the tape it follows the convex hull of the skin (it bridges the
 notch above the nose), and each place is then put on the skin below it.
 """
@@ -164,7 +165,7 @@ def all_places(
     lower : bool
         Also the places 5 and 10 % below the rows (9h, 9, I1, OI1 ...).
     skin : Skin, optional
-        The same mesh, when it has been prepared already.
+        The same mesh without the ears, when it has been prepared already.
 
     Returns
     -------
@@ -194,7 +195,8 @@ def all_places(
         msg = f"The tape-measure rules need the landmark(s) {', '.join(lacking)}."
         raise ValueError(msg)
     if skin is None:
-        skin = Skin(vertices_mm, faces)
+        ears = [np.asarray(landmarks_mm[name], dtype=np.float64) for name in ("LPA", "RPA")]
+        skin = Skin(vertices_mm, faces).without_thin_parts(np.array(ears))
     nas, ini, lpa, rpa = (
         np.asarray(landmarks_mm[name], dtype=np.float64) for name in ("NAS", "INI", "LPA", "RPA")
     )

@@ -386,6 +386,23 @@ def test_extra_blobs_keep_clear_of_every_named_place(shaped, where):
             assert feet[:, 2].max() < center
 
 
+def test_no_electrode_and_no_blob_sits_on_an_ear(shaped):
+    # below a pad on the head there is head; below one on an ear there is air again
+    inverse = np.linalg.inv(shaped.scanner_from_voxel)
+    for seed in range(3):
+        cap = make_cap(
+            *shaped.surfaces["scalp"], shaped.landmarks_mm, CAPS[128], seed,
+            jitter_mm=3.0, turn_deg=4.0, slide_mm=4.0, n_extra=8, extra_where="outside",
+        )  # fmt: skip
+        feet = cap.worn.centers_mm - cap.worn.axes * (
+            cap.worn.gaps_mm + cap.worn.heights_mm / 2 + 9.0
+        )[:, None]  # fmt: skip
+        index = np.rint(feet @ inverse[:3, :3].T + inverse[:3, 3]).astype(int)
+        index = np.clip(index, 0, np.array(shaped.labels.shape) - 1)
+        smooth = ndi.binary_closing(shaped.labels > 0, iterations=3)
+        assert np.mean(smooth[tuple(index.T)]) > 0.99
+
+
 def test_reference_and_side_marker_are_worn(shaped):
     cap = make_cap(
         *shaped.surfaces["scalp"], shaped.landmarks_mm, NAMES_19, 0,

@@ -7,7 +7,7 @@ from typing import Any
 
 from locator.errors import FileError, SettingError
 from locator.io import reviews
-from locator.io.files import read_json, sha256_of, write_bytes
+from locator.io.files import HIDDEN, read_json, sha256_of, write_bytes
 from locator.session.options import KEYS, PATHS, SessionOptions, checked_value
 from locator.session.outputs import SCHEMA
 
@@ -41,7 +41,7 @@ def prepare_again(provenance: Path, out: Path) -> SessionOptions:
             f" {SCHEMA} and 'run' are needed). Give the provenance.json of a run."
         )
         raise FileError(msg)
-    if out.is_dir() and any(out.iterdir()):
+    if out.is_dir() and any(entry.name != HIDDEN for entry in out.iterdir()):
         msg = f"{out} is not empty. Choose a new folder for --again, so that nothing is mixed."
         raise FileError(msg)
     kept: bytes | None = None

@@ -21,7 +21,7 @@ from locator.io.cache import StageCache, library_versions
 from locator.io.files import HIDDEN, clean_parts, folder_lock
 from locator.labels import LabelOptions
 from locator.markers import MarkerOptions
-from locator.pipeline import RunResults
+from locator.pipeline import RunResults, Step
 from locator.recording import (
     EpochOptions,
     check_times,
@@ -31,9 +31,9 @@ from locator.recording import (
 from locator.session import outputs, records
 from locator.session.inputs import Inputs, read_inputs
 from locator.session.options import SessionOptions
-from locator.session.stages import Stages, Told, silent
+from locator.session.stages import NotKeptError, Stages, Told, silent
 from locator.skin import SkinOptions
-from locator.statistics import RegionOptions
+from locator.statistics import NullControl, Peaks, RegionOptions
 
 logger = logging.getLogger(__name__)
 
@@ -228,7 +228,7 @@ def run_all(options: SessionOptions, *, told: Told = silent) -> Outcome:
 
 def _run_settings(options: SessionOptions, inputs: Inputs) -> dict[str, Any]:
     epoch_options = EpochOptions(event=options.event, epoch_s=options.epoch)
-    method = {} if options.method is None else {"method": options.method}
+    method: dict[str, Any] = {} if options.method is None else {"method": options.method}
     return {
         **_find_settings(options, inputs),
         "head_options": HeadOptions(),
@@ -308,27 +308,23 @@ def _compute_and_write(
         timings=tuple(stages.timings),
     )
     began = time.perf_counter()
-    outputs.take_away_stale(out)
-    outputs.write_maps(out, inputs.grid, projection.sources, projection.test)
-    outputs.write_operator(out, projection)
-    peaks = pipeline.peaks_of(projection, epochs, step=stages.step)
-    outputs.write_report(out, replace(results, peaks=peaks, timings=tuple(stages.timings)))
-    stages.note("first files", began)
-    peaks = pipeline.regions_of(
-        peaks,
-        head,
-        projection,
-        epochs,
-        forward_options=settings["forward_options"],
-        inverse_options=settings["inverse_options"],
-        region_options=settings["region_options"],
-        seed=options.seed,
-        step=stages.step,
-    )
-    region = pipeline.region_on_grid(peaks, projection.sources)
-    outputs.write_place(out, inputs.grid, peaks, region)
-    null = None
-    if epochs.testable:
+    first = pipeline.peaks_of(projection, epochs, step=stages.step)
+
+    def doubts(step: Step) -> tuple[Peaks, NullControl | None]:
+        """Regions of the peaks, and the control on stretches without events."""
+        peaks = pipeline.regions_of(
+            first,
+            head,
+            projection,
+            epochs,
+            forward_options=settings["forward_options"],
+            inverse_options=settings["inverse_options"],
+            region_options=settings["region_options"],
+            seed=options.seed,
+            step=step,
+        )
+        if not epochs.testable:
+            return peaks, None
         null = pipeline.check_on_nothing(
             recording,
             epochs,
@@ -336,8 +332,22 @@ def _compute_and_write(
             epoch_options=settings["epoch_options"],
             window_s=window,
             seed=options.seed,
-            step=stages.step,
+            step=step,
         )
+        return peaks, null
+
+    outputs.write_maps(out, inputs.grid, projection.sources, projection.test)
+    outputs.write_operator(out, projection)
+    try:
+        doubts(stages.kept)
+    except NotKeptError:
+        # They take a while: the maps are there meanwhile, with a page that says what is not.
+        outputs.take_away_stale(out)
+        outputs.write_report(out, replace(results, peaks=first, timings=tuple(stages.timings)))
+    stages.note("first files", began)
+    peaks, null = doubts(stages.step)
+    region = pipeline.region_on_grid(peaks, projection.sources)
+    outputs.write_place(out, inputs.grid, peaks, region)
     began = time.perf_counter()
     results = replace(
         results, peaks=peaks, null_control=null, complete=True, timings=tuple(stages.timings)

@@ -34,6 +34,10 @@ def peak_memory_mb() -> float:
     return used / (1 << 20) if sys.platform == "darwin" else used / (1 << 10)
 
 
+class NotKeptError(Exception):
+    """A stage is not stored yet; never reaches a person."""
+
+
 class Stages:
     """Carries out the stages of one command in one folder.
 
@@ -68,6 +72,19 @@ class Stages:
             self.cache.put(stage, key, function(*args, **settings))
             result = self.cache.get(stage, key)
         self.note(stage, began, kept=kept)
+        return result  # type: ignore[no-any-return]
+
+    def kept(self, stage: str, function: Callable[..., T], /, *args: Any, **settings: Any) -> T:
+        """Return the result of a stage that need not be computed.
+
+        Raises
+        ------
+        NotKeptError
+            If it would have to be.
+        """
+        result = self.cache.get(stage, self.cache.key(stage, function, args, settings))
+        if result is None:
+            raise NotKeptError(stage)
         return result  # type: ignore[no-any-return]
 
     def note(self, stage: str, began: float, *, kept: bool = False) -> None:

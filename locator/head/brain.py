@@ -12,7 +12,8 @@ from scipy import ndimage
 from locator.errors import HeadError
 from locator.geometry import icosphere
 from locator.head.grid import WorkGrid
-from locator.head.morphology import box_around, distance_to, largest_piece
+from locator.head.morphology import box_around, distance_to
+from locator.head.parts import seed_mask
 from locator.head.shape import fill_mesh, ring_neighbours
 from locator.head.tissues import Mixture, fit_mixture, shading
 
@@ -20,6 +21,9 @@ FloatArray = NDArray[np.float64]
 Float32Array = NDArray[np.float32]
 BoolArray = NDArray[np.bool_]
 
+
+SMOOTH_MM = 1.0
+"""Smoothing for the growing surface: without it, sharp sulci stop it (0.8 to 1.1 served alike)."""
 
 TOO_BRIGHT = 1.4
 """Brain is at most this many times the white-matter mean; fat is brighter (figures: 2 times)."""
@@ -169,7 +173,7 @@ def find_brain(grid: WorkGrid, scale: float) -> Brain:
     corrected = grid.image / shading(first, grid.image.shape)
     # Fat and marrow are brighter than white matter: made dark, they stop the surface.
     corrected[corrected > TOO_BRIGHT * first.mean[2]] = 0.0
-    smooth = ndimage.gaussian_filter(corrected, 0.5)
+    smooth = ndimage.gaussian_filter(corrected, SMOOTH_MM)
     sphere, faces = icosphere(4)
     ring = ring_neighbours(faces, len(sphere))
     fraction = 0.5 * (first.mean[0] + first.mean[1]) / first.mean[2]
@@ -197,8 +201,8 @@ def find_brain(grid: WorkGrid, scale: float) -> Brain:
         & (distance_to(grown) <= 4)
         & (grid.height_mm[box] < -3)
     )
-    core = largest_piece(distance_to(~tissue) > 2)
-    mask = largest_piece((distance_to(core) <= 3) & tissue)
+    core = _brain_pieces(distance_to(~tissue) > 2, grown)
+    mask = (distance_to(core) <= 3) & tissue
     return Brain(
         box=box,
         mask=mask,
@@ -206,6 +210,28 @@ def find_brain(grid: WorkGrid, scale: float) -> Brain:
         mixture=mixture,
         leak=volumes[0] / max(volumes[1], 1.0),
     )
+
+
+def _brain_pieces(core: BoolArray, grown: BoolArray) -> BoolArray:
+    """Largest piece, and those lying where cerebellum and brain stem should be.
+
+    Thin brain stems and sharp tentoria cut the cerebellum off when the tissue is eroded.
+    """
+    labels, count = ndimage.label(core)
+    if count == 0:
+        return core
+    sizes = np.bincount(labels.ravel())
+    sizes[0] = 0
+    keep = np.zeros(count + 1, dtype=bool)
+    keep[sizes.argmax()] = True
+    seeds = seed_mask(grown, 14.0)
+    in_seeds = np.bincount(labels[seeds], minlength=count + 1)
+    in_grown = np.bincount(labels[grown], minlength=count + 1)
+    with np.errstate(divide="ignore", invalid="ignore"):
+        inside = in_grown / sizes
+    keep |= (in_seeds > 500) & (inside > 0.9) & (sizes < 300_000)
+    keep[0] = False
+    return keep[labels]
 
 
 def _ball(shape: tuple[int, ...], center: FloatArray, radius: float) -> BoolArray:

@@ -9,7 +9,7 @@ from numpy.typing import ArrayLike, NDArray
 from scipy import ndimage
 
 from locator.geometry import apply_affine, icosphere
-from locator.head.brain import find_brain
+from locator.head.brain import Brain, find_brain
 from locator.head.checks import check_head
 from locator.head.grid import make_grid
 from locator.head.model import (
@@ -26,6 +26,8 @@ from locator.head.model import (
 from locator.head.morphology import close, distance_to
 from locator.head.parts import label_parts
 from locator.head.shape import (
+    cover,
+    face_weights,
     fill_mesh,
     limit_slope,
     ring_neighbours,
@@ -45,6 +47,9 @@ FloatArray = NDArray[np.float64]
 HULL_MM = 15.0
 """The brain is closed by a ball of this radius before rays meet it: raw brains are not
 star-shaped."""
+
+CLEAR_MM = 0.5
+"""Least distance of the inner skull outside the brain's hull, along the rays."""
 
 STEEPEST = 1.7
 """Largest change of the logarithm of a radius per radian (60 degrees between ray and normal)."""
@@ -113,20 +118,27 @@ def build_head(
     rays, faces = icosphere(4)
     ring = ring_neighbours(faces, len(rays))
     hull = mask_radii(distance, center, rays, float(np.linalg.norm(closed.shape)))
-    hull = limit_slope(hull, ring, _angle(rays, ring), STEEPEST)
+    angle = _angle(rays, ring)
+    hull = limit_slope(hull, ring, angle, STEEPEST, outward=True)
     profile_image = grid.image / np.float32(brain.mixture.mean[1])
     profile_image[brain.box] = brain.corrected / np.float32(brain.mixture.mean[1])
     center = center + offset
-    csf_level = float(brain.mixture.mean[0] / brain.mixture.mean[1])
+    csf_level = _csf_level(brain, labels, distance)
     skull = find_skull(grid, profile_image, center, rays, ring, hull, csf_level, options)
     report(0.7, "making the surfaces")
-    angle = _angle(rays, ring)
-    inner = limit_slope(smooth_on_sphere(skull.inner, ring, 1), ring, angle, STEEPEST)
-    outer = limit_slope(smooth_on_sphere(skull.outer, ring, 1), ring, angle, STEEPEST)
-    scalp = limit_slope(skull.scalp, ring, angle, STEEPEST)
+    inner = np.maximum(smooth_on_sphere(skull.inner, ring, 1), hull + CLEAR_MM)
+    inner = limit_slope(inner, ring, angle, STEEPEST, outward=True)
+    outer = limit_slope(smooth_on_sphere(skull.outer, ring, 1), ring, angle, STEEPEST, outward=True)
+    scalp = limit_slope(skull.scalp, ring, angle, STEEPEST, outward=False)
     model_rays, model_faces = icosphere(options.subdivisions)
     pick, weight = _onto(model_rays, rays)
     radii = [(values[pick] * weight).sum(axis=1) for values in (inner, outer, scalp)]
+    corners, corner_weights = face_weights(rays, model_rays, model_faces)
+    covering = cover(radii[0], hull + CLEAR_MM, corners, corner_weights, 4.0)
+    on_vault = (skull.vault[pick] * weight).sum(axis=1) > 0.5
+    # Where the outer table was only assumed it goes along with the inner one.
+    radii[1] = radii[1] + np.where(on_vault, 0.0, covering - radii[0])
+    radii[0] = covering
     least = options.separation_mm
     wanted_outer, wanted_scalp = radii[1].copy(), radii[2].copy()
     radii[1] = separate(radii[0], radii[1], model_rays, model_faces, least)
@@ -171,7 +183,7 @@ def build_head(
         grid,
         brain,
         radii=radii,
-        vault=(skull.vault[pick] * weight).sum(axis=1) > 0.5,
+        vault=on_vault,
         rays=model_rays,
         padded=padded,
         brain_ml=brain_ml,
@@ -189,6 +201,15 @@ def build_head(
         brain_volume_ml=brain_ml,
         findings=findings,
     )
+
+
+def _csf_level(brain: Brain, labels: NDArray[np.uint8], distance: NDArray[np.float32]) -> float:
+    """Intensity of pure CSF in units of grey matter: the inside of the ventricles."""
+    middle = 0.5 * (brain.mixture.mean[0] + brain.mixture.mean[1])
+    fluid = (distance < -12) & (labels < 2) & (brain.corrected < middle)
+    core = brain.corrected[ndimage.binary_erosion(fluid)]
+    level = np.median(core) if len(core) > 300 else brain.mixture.mean[0]
+    return float(level / brain.mixture.mean[1])
 
 
 def _angle(rays: FloatArray, ring: NDArray[np.int32]) -> float:

@@ -89,7 +89,7 @@ class HeadOptions:
         (Li et al. 2007, Int J Vehicle Safety).
     brain_threshold : float
         The growing brain surface stops where the intensity falls to this share of the middle
-        between CSF and grey matter, 0.5 to 1.2; 0.8 was the best of those tried.
+        between CSF and grey matter, 0.5 to 1.2; 0.8 to 0.9 was the best of those tried.
     below_vertex_mm : float
         The head model ends this far below its highest point, 150 to 260 mm.
     """
@@ -100,7 +100,7 @@ class HeadOptions:
     csf_sd_mm: float = 1.5
     skull_mm: float = 6.5
     skull_sd_mm: float = 2.0
-    brain_threshold: float = 0.8
+    brain_threshold: float = 0.88
     below_vertex_mm: float = 200.0
 
     def __post_init__(self) -> None:

@@ -104,7 +104,7 @@ def _point_triangle(p, a, b, c):  # type: ignore[no-untyped-def]
     if d3 >= 0.0 and d4 <= d3:
         return np.dot(bp, bp)
     vc = d1 * d4 - d3 * d2
-    if vc <= 0.0 and d1 >= 0.0 and d3 <= 0.0:
+    if vc <= 0.0 and d1 >= 0.0 and d3 <= 0.0 and d1 > d3:
         q = ap - (d1 / (d1 - d3)) * ab
         return np.dot(q, q)
     cp = p - c
@@ -112,14 +112,17 @@ def _point_triangle(p, a, b, c):  # type: ignore[no-untyped-def]
     if d6 >= 0.0 and d5 <= d6:
         return np.dot(cp, cp)
     vb = d5 * d2 - d1 * d6
-    if vb <= 0.0 and d2 >= 0.0 and d6 <= 0.0:
+    if vb <= 0.0 and d2 >= 0.0 and d6 <= 0.0 and d2 > d6:
         q = ap - (d2 / (d2 - d6)) * ac
         return np.dot(q, q)
     va = d3 * d6 - d5 * d4
-    if va <= 0.0 and d4 - d3 >= 0.0 and d5 - d6 >= 0.0:
+    if va <= 0.0 and d4 - d3 >= 0.0 and d5 - d6 >= 0.0 and (d4 - d3) + (d5 - d6) > 0.0:
         q = bp - ((d4 - d3) / ((d4 - d3) + (d5 - d6))) * (c - b)
         return np.dot(q, q)
-    scale = 1.0 / (va + vb + vc)
+    total = va + vb + vc
+    if total <= 0.0:  # a face without area: its corners and edges were looked at
+        return min(np.dot(ap, ap), np.dot(bp, bp), np.dot(cp, cp))
+    scale = 1.0 / total
     q = ap - (vb * scale) * ab - (vc * scale) * ac
     return np.dot(q, q)
 
@@ -239,16 +242,74 @@ def separate(
     return radii
 
 
-def limit_slope(radii_mm: FloatArray, ring: IntArray, angle_rad: float, slope: float) -> FloatArray:
-    """Largest radii at or below those given whose logarithm changes at most `slope` a radian.
+def limit_slope(
+    radii_mm: FloatArray, ring: IntArray, angle_rad: float, slope: float, *, outward: bool
+) -> FloatArray:
+    """Nearest radii on one side of those given whose logarithm changes at most `slope` a radian.
 
     Keeps triangles of a radial mesh from becoming needles where the surface runs along the rays.
+    With `outward` low places are lifted, else high places are cut.
     """
-    log = np.log(radii_mm)
-    for _ in range(100):
+    sign = -1.0 if outward else 1.0
+    log = sign * np.log(radii_mm)
+    for _ in range(200):
         new = np.minimum(log, log[ring].min(axis=1) + slope * angle_rad)
         if np.array_equal(new, log):
             break
         log = new
-    result: FloatArray = np.exp(log)
+    result: FloatArray = np.exp(sign * log)
     return result
+
+
+def face_weights(
+    rays: FloatArray, model_rays: FloatArray, faces: IntArray
+) -> tuple[IntArray, FloatArray]:
+    """Face of a model that each ray crosses and the weights of its corners, (N, 3) both.
+
+    A ray is the weighted sum of the corners' rays, so ``1 / (weights / radii).sum()`` is the
+    radius of the radial mesh along it.
+    """
+    middles = model_rays[faces].mean(axis=1)
+    near = np.argsort(-(rays @ middles.T), axis=1)[:, :4]
+    inverse = np.linalg.inv(np.transpose(model_rays[faces], (0, 2, 1)))
+    weights = np.einsum("nfij,nj->nfi", inverse[near], rays)
+    best = weights.min(axis=2).argmax(axis=1)
+    row = np.arange(len(rays))
+    return faces[near[row, best]], weights[row, best]
+
+
+def cover(
+    radii_mm: FloatArray,
+    least_mm: FloatArray,
+    corners: IntArray,
+    weights: FloatArray,
+    most_mm: float,
+) -> FloatArray:
+    """Radii of a coarse mesh moved out until it holds points on finer rays.
+
+    Parameters
+    ----------
+    radii_mm : (V,) ndarray
+        Radii of the coarse mesh.
+    least_mm : (N,) ndarray
+        Radii of the points that shall lie inside, along the fine rays.
+    corners, weights : (N, 3) ndarray
+        From `face_weights`.
+    most_mm : float
+        No vertex moves farther than this.
+    """
+    radii = radii_mm.copy()
+    limit = radii_mm + most_mm
+    for _ in range(60):
+        mesh = 1.0 / (weights / radii[corners]).sum(axis=1)
+        lack = np.maximum(least_mm - mesh, 0.0)
+        if lack.max() < 0.02:
+            break
+        push = np.zeros_like(radii)
+        for corner in range(3):
+            np.maximum.at(push, corners[:, corner], lack * np.clip(weights[:, corner], 0.0, 1.0))
+        new = np.minimum(radii + push, limit)
+        if np.array_equal(new, radii):
+            break
+        radii = new
+    return radii

@@ -19,6 +19,9 @@ IntArray = NDArray[np.int32]
 STEP_MM = 0.5
 """Spacing of the samples along a ray, and of the candidate places of the tables."""
 
+TABLE_MM = 1.5
+"""Least thickness of the dark inner table (value from memory)."""
+
 THINNEST_MM = 2.0
 """Thinnest bone that is looked for (temporal squama; value from memory)."""
 
@@ -144,6 +147,48 @@ def _choose(
     return pick + np.clip(part, -0.5, 0.5), spread
 
 
+def _inner_cost(
+    profile: FloatArray,
+    origin: int,
+    depth: FloatArray,
+    outer: FloatArray,
+    csf_level: float,
+    vault: NDArray[np.bool_],
+) -> FloatArray:
+    """How badly "CSF up to here, then a dark table" fits each ray, (V, labels).
+
+    CSF may be brighter than its level (vessels, dura, a gyrus beyond the hull) but hardly darker;
+    the first `TABLE_MM` of bone are dark; what follows up to the outer table may be marrow. The
+    tolerance grows as CSF and bone come closer in brightness, so that the priors decide where the
+    image cannot.
+    """
+    n_rays, n_samples = profile.shape
+    samples = np.arange(n_samples) - origin
+    inside = (samples[None, :] >= 0) & (samples[None, :] * STEP_MM <= outer[:, None])
+    known = profile[vault][inside[vault]]
+    bone_level = float(np.percentile(known, 10)) if len(known) else 0.0
+    bone_level = min(bone_level, 0.8 * csf_level)
+    spread = max((csf_level - bone_level) / 2.5, 0.08)
+    off = (profile - csf_level) / spread
+    as_csf = np.where(off < 0, np.minimum(0.5 * off**2, 3.0), np.minimum(0.05 * off**2, 0.8))
+    off = np.maximum(profile - bone_level, 0.0) / spread
+    as_bone = np.minimum(0.5 * off**2, 4.0)
+    as_rest = np.minimum(as_bone, 0.4)
+    sums = []
+    for values in (as_csf, as_bone, as_rest):
+        values = np.where(inside, values, 0.0)
+        sums.append(np.concatenate([np.zeros((n_rays, 1)), np.cumsum(values, axis=1)], axis=1))
+    here = origin + np.rint(depth / STEP_MM).astype(int)
+    table = np.minimum(here + round(TABLE_MM / STEP_MM), n_samples)
+    cost = (
+        sums[0][:, here]
+        + (sums[1][:, table] - sums[1][:, here])
+        + (sums[2][:, [-1]] - sums[2][:, table])
+    )
+    result: FloatArray = 0.7 * cost
+    return result
+
+
 def find_skull(
     grid: WorkGrid,
     profile_image: NDArray[np.float32],
@@ -209,7 +254,13 @@ def find_skull(
     outside = mean_between(place + 0.5, place + 2.5)
     edge = np.clip(outside - inside, -1.0, 0.8)
     dark = np.clip(inside - 0.4, 0.0, 1.0)
-    cost = -6.0 * edge + 3.0 * dark
+    # Bone-dark length between the candidate and the skin: beyond marrow there is a table still.
+    bone_like = np.clip(1.0 - profile / (0.7 * csf_level + 0.1), 0.0, 1.0)
+    bone_like[at[None, :] > gap[:, None] - 1.5] = 0.0
+    bone_sum = np.concatenate([np.zeros((len(rays), 1)), np.cumsum(bone_like, axis=1)], axis=1)
+    first = np.clip(np.rint((place + 0.5 + before) / STEP_MM).astype(int), 0, profile.shape[1])
+    left_over = (bone_sum[:, [-1]] - bone_sum[:, first]) * STEP_MM
+    cost = -6.0 * edge + 3.0 * dark + 2.0 * np.minimum(left_over, 4.0)
     expected = options.csf_mm + options.skull_mm
     cost = cost + 0.5 * ((place - expected) / 5.0) ** 2
     cost[~vault] = 0.5 * ((place - expected) / 2.0) ** 2
@@ -220,19 +271,9 @@ def find_skull(
     # Inner table.
     depth = np.arange(0.5, 14.0, STEP_MM)
     thickness = outer[:, None] - depth[None, :]
-    outside = mean_between(depth + 0.5, depth + 2.0)
-    inside = mean_between(depth - 1.5, depth)
-    crossed = np.maximum(0.0, 0.6 * csf_level - profile)
-    crossed_sum = (
-        np.concatenate([np.zeros((len(rays), 1)), np.cumsum(crossed, axis=1)], axis=1) * STEP_MM
-    )
-    origin = round(before / STEP_MM)
-    bone_crossed = crossed_sum[:, origin + np.rint(depth / STEP_MM).astype(int)]
-    bone_crossed = bone_crossed - crossed_sum[:, [origin]]
+    cost = _inner_cost(profile, round(before / STEP_MM), depth, outer, csf_level, vault)
     cost = (
-        4.0 * np.clip(outside, 0.0, 1.0)
-        - 3.0 * np.clip(inside - outside, -0.3, 0.6)
-        + 3.0 * bone_crossed
+        cost
         + 0.5 * ((depth - options.csf_mm) / options.csf_sd_mm) ** 2
         + 0.5 * ((thickness - options.skull_mm) / (1.5 * options.skull_sd_mm)) ** 2
     )

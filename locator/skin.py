@@ -23,6 +23,13 @@ logger = logging.getLogger(__name__)
 RAY_INSIDE_MM, RAY_OUTSIDE_MM, RAY_STEP_MM = 7.0, 7.0, 0.5
 """How far, and how finely, the image is read along each surface normal."""
 
+STANDS_OUT_MM = 1.5
+"""An edge this much farther out than the skin around it belongs to something on the skin."""
+
+FACE_PART_ML = 1.5
+"""Volume over which a part that is thicker than any capsule belongs to the face; a capsule of
+12 mm has 0.9 mL."""
+
 BAND_MM = 24.0
 """Beyond this distance from the skin the height map is not refined."""
 
@@ -43,7 +50,8 @@ class SkinOptions:
         0.10 from a feasibility study on four volumes; a noisy background raises it by itself.
     opening_mm : float
         Radius of the ball that rolls inside the head, mm (4 to 20): what it cannot reach
-        (capsules, ears) is not skin. Wider than half of the widest capsule, 12 mm.
+        (capsules, ears) is not skin. Twice the radius of the widest capsule, 12 mm: a ball no
+        wider than the capsule rises into it.
     closing_mm : float
         Radius of the ball that rolls outside, mm (0 to 20): the holes it cannot enter (ear
         canals, shadows of electrode housings) count as inside.
@@ -54,7 +62,7 @@ class SkinOptions:
     """
 
     threshold: float = 0.10
-    opening_mm: float = 8.0
+    opening_mm: float = 12.0
     closing_mm: float = 10.0
     smooth_mm: float = 4.0
     detail_mm: float = 2.0
@@ -145,7 +153,7 @@ def find_skin(
     threshold, floor = _tissue_threshold(coarse, options.threshold)
     body = _largest_body(coarse > threshold, 2 * voxel_sizes_mm(scanner_from_grid))
     tell(0.4, "leaving off capsules and ears")
-    first, box = _first_surface(body, 2 * voxel_sizes_mm(scanner_from_grid), options)
+    first, face, box = _first_surface(body, 2 * voxel_sizes_mm(scanner_from_grid), options)
     # From here on everything is cropped to the head: `box` in coarse voxels, twice in fine ones.
     fine_box = tuple(slice(2 * s.start, 2 * s.stop) for s in box)
     image = np.ascontiguousarray(image[fine_box])
@@ -153,7 +161,7 @@ def find_skin(
     scanner_from_grid[:3, 3] = apply_affine(scanner_from_grid, [float(s.start) for s in fine_box])
     tell(0.6, "finding the edge")
     rays = _Rays.cast(image, first, scanner_from_grid, threshold, floor)
-    offset, sd_mm = _offset_map(rays, first, voxel_sizes_mm(scanner_from_grid) * 2, options)
+    offset, sd_mm = _offset_map(rays, first, face, voxel_sizes_mm(scanner_from_grid) * 2, options)
     height = _refined(first, offset, 2 * voxel_sizes_mm(scanner_from_grid))
     tell(0.8, "meshing")
     vertices, faces = _mesh(height, scanner_from_grid)
@@ -414,8 +422,8 @@ def _largest_body(mask: NDArray[np.bool_], voxel_mm: FloatArray) -> NDArray[np.b
 
 def _first_surface(
     body: NDArray[np.bool_], voxel_mm: FloatArray, options: SkinOptions
-) -> tuple[Grid, tuple[slice, ...]]:
-    """Smoothed signed distance of the opened body, cropped, and the crop in coarse voxels."""
+) -> tuple[Grid, NDArray[np.bool_], tuple[slice, ...]]:
+    """Smoothed signed distance of the opened body, parts of the face, and the crop (coarse)."""
     # Only the head and a border round it.
     filled = [np.flatnonzero(body.any(axis=tuple({0, 1, 2} - {axis}))) for axis in range(3)]
     border = np.ceil(BAND_MM / voxel_mm).astype(int)
@@ -427,7 +435,8 @@ def _first_surface(
     # Where the head runs out of the volume it goes on: the rolling balls must not see an edge.
     margin = np.ceil((options.opening_mm + 4) / voxel_mm).astype(int)
     wide = np.pad(body, [(m, m) for m in margin], mode="edge")
-    core = ndimage.distance_transform_edt(wide, sampling=voxel_mm) > options.opening_mm
+    depth = ndimage.distance_transform_edt(wide, sampling=voxel_mm)
+    core = depth > options.opening_mm
     labels, count = ndimage.label(core)
     if count == 0:
         msg = (
@@ -438,17 +447,31 @@ def _first_surface(
     sizes = np.bincount(labels.ravel())
     sizes[0] = 0
     core = labels == sizes.argmax()
-    away = ndimage.distance_transform_edt(~core, sampling=voxel_mm)
-    # Closing the opened body: out by the closing radius, and back. The ways out and back are
-    # distances to the closed surface too.
-    reach = options.opening_mm + options.closing_mm
-    back = ndimage.distance_transform_edt(away <= reach, sampling=voxel_mm)
-    signed = np.where(back > 0, options.closing_mm - back, away - options.opening_mm)
+    opened = ndimage.distance_transform_edt(~core, sampling=voxel_mm) <= options.opening_mm
+    face = _face_parts(depth, opened, voxel_mm, options)
+    # Closing: out by the closing radius, and back. The ways out and back are distances to the
+    # closed surface too.
+    away = ndimage.distance_transform_edt(~(opened | face), sampling=voxel_mm)
+    back = ndimage.distance_transform_edt(away <= options.closing_mm, sampling=voxel_mm)
+    signed = np.where(back > 0, options.closing_mm - back, away)
     # The transforms measure to voxel centres: half a voxel from the boundary between them.
     signed += float(np.mean(voxel_mm)) / 2 * np.where(back > 0, 1, -1)
     signed = ndimage.gaussian_filter(signed.astype(np.float32), options.smooth_mm / voxel_mm)
     inner = tuple(slice(m, m + n) for m, n in zip(margin, body.shape, strict=True))
-    return np.ascontiguousarray(signed[inner]), box
+    return np.ascontiguousarray(signed[inner]), face[inner], box
+
+
+def _face_parts(
+    depth: FloatArray, opened: NDArray[np.bool_], voxel_mm: FloatArray, options: SkinOptions
+) -> NDArray[np.bool_]:
+    """What a smaller ball still reaches and is too big for a capsule: nose and chin."""
+    smaller = options.opening_mm * 2 / 3
+    reached = ndimage.distance_transform_edt(depth <= smaller, sampling=voxel_mm) <= smaller
+    labels, _ = ndimage.label(reached & ~opened)
+    sizes = np.bincount(labels.ravel()) * float(np.prod(voxel_mm)) / 1e3
+    sizes[0] = 0
+    face: NDArray[np.bool_] = (sizes > FACE_PART_ML)[labels]
+    return face
 
 
 @dataclass(frozen=True, eq=False, slots=True)
@@ -507,9 +530,10 @@ def _edges(
     cost = np.where(falls, np.abs(middle), np.inf)
     at = cost.argmin(axis=1)
     found = np.isfinite(cost.min(axis=1))
-    # Local outer maximum: within 2 mm under the fall.
+    # Local outer maximum: within 1 mm under the fall. Deeper, bright fat would take the place
+    # of the skin, which is 2 mm thick and four times darker.
     steps = np.arange(count)
-    reach = round(2.0 / RAY_STEP_MM)
+    reach = round(1.0 / RAY_STEP_MM)
     under = (steps <= at[:, None]) & (steps >= at[:, None] - reach)
     peak = np.where(under, profile, -np.inf).max(axis=1)
     level = np.maximum(floor + 0.5 * (peak - floor), threshold)
@@ -531,7 +555,11 @@ def _edges(
 
 
 def _offset_map(
-    rays: _Rays, first: Grid, voxel_mm: FloatArray, options: SkinOptions
+    rays: _Rays,
+    first: Grid,
+    face: NDArray[np.bool_],
+    voxel_mm: FloatArray,
+    options: SkinOptions,
 ) -> tuple[Grid, float]:
     """Smooth map of the edge's offset near the surface (coarse grid), and its scatter, mm."""
     if rays.clear.mean() < 0.1:
@@ -543,14 +571,24 @@ def _offset_map(
         raise SkinError(msg)
     weight = rays.clear.astype(np.float64)
     offset = np.zeros(first.shape, np.float32)
+    near_face = ndimage.binary_dilation(face, iterations=3)
+    on_face = near_face[tuple(np.rint(rays.feet).astype(int).T)]
     for _ in range(2):
-        offset = _spread(rays, weight, first.shape, voxel_mm, options.detail_mm)
+        # What stands out from 12 mm around is no skin, clear though its edge may be.
+        offset = _spread(rays, weight, first.shape, voxel_mm, (6 * options.detail_mm,))
+        wide = ndimage.map_coordinates(offset, rays.feet.T, order=1, mode="nearest")
+        weight = rays.clear * ((rays.offset_mm - wide < STANDS_OUT_MM) | on_face)
+    wide_weight = weight
+    scales = (options.detail_mm, 2.5 * options.detail_mm, 6 * options.detail_mm)
+    for _ in range(2):
+        offset = _spread(rays, weight, first.shape, voxel_mm, scales)
         smooth = ndimage.map_coordinates(offset, rays.feet.T, order=1, mode="nearest")
         residual = rays.offset_mm - smooth
-        clear = residual[rays.clear]
+        clear = residual[wide_weight > 0]
         sd = max(1.4826 * float(np.median(np.abs(clear - np.median(clear)))), 0.05)
         # Tukey's biweight: edges that stand out from their neighbours do not count.
-        weight = rays.clear * np.clip(1 - (residual / (4 * max(sd, 0.15))) ** 2, 0, None) ** 2
+        share = np.clip(1 - (residual / (4 * max(sd, 0.15))) ** 2, 0, None) ** 2
+        weight = wide_weight * share
     return offset, float(np.hypot(sd, 0.1))
 
 
@@ -559,14 +597,14 @@ def _spread(
     weight: FloatArray,
     shape: tuple[int, ...],
     voxel_mm: FloatArray,
-    detail_mm: float,
+    scales_mm: tuple[float, ...],
 ) -> Grid:
     """Weighted means of the offsets over neighbours; wider where clear rays are far."""
     summed_up, total_up = np.zeros(shape, np.float32), np.zeros(shape, np.float32)
     # Each wider mean counts a hundredth of the one before: it decides only in gaps. The wide
     # ones are made on a grid of half the resolution.
-    for power, sigma in enumerate((detail_mm, 2.5 * detail_mm, 6 * detail_mm)):
-        step = 1 if power == 0 else 2
+    for power, sigma in enumerate(scales_mm):
+        step = 1 if sigma < 2 * voxel_mm.mean() else 2
         small = tuple(-(-n // step) for n in shape)
         corner = np.clip(np.rint(rays.feet / step).astype(int), 0, np.array(small) - 1)
         flat = np.ravel_multi_index(tuple(corner.T), small)

@@ -160,8 +160,10 @@ def find_markers(
     tell(0.6, "fitting blobs of the common size")
     seen = _Evidence.of(found, skin, fat)
     common = float(np.exp(seen.judge(options)[1][1]))
-    starts = np.array([fit.center_mm for fit in found])
-    found = _distinct(_fit_all(fitter, skin, starts, np.full(len(found), common)))
+    centers = np.array([fit.center_mm for fit in found])
+    missed = cKDTree(centers).query(starts)[0] > 0.4 * common
+    starts = np.concatenate([centers, starts[missed]])
+    found = _distinct(_fit_all(fitter, skin, starts, np.full(len(starts), common)))
     if not found:
         raise MarkerError(_nothing(0, options))
     tell(0.8, "comparing blobs")

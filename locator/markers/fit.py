@@ -24,6 +24,12 @@ LEFT_OUT_MM = 1.0
 LEAST_VOXELS = 20
 """A fit with fewer voxels than this says nothing."""
 
+MOST_VOXELS = 2000
+"""A capsule of 12 mm on the skin fills about 1000 voxels of 1 mm and its window 2500."""
+
+GOLDEN = (5**0.5 - 1) / 2
+"""Multiples of it fill the unit interval evenly (Weyl 1916)."""
+
 HOPELESS = {0: 0.1, 4: 0.35}
 """Share of the variance that a blob must explain at the start and after four steps; a capsule
 explains 0.8 and more."""
@@ -166,7 +172,10 @@ class Fitter:
         out = height > -LEFT_OUT_MM
         if out.sum() < LEAST_VOXELS:
             return None
-        index, points, height = index[out], points[out], height[out]
+        # More voxels than a fit needs are thinned out, evenly through the window.
+        keep = np.flatnonzero(out)
+        keep = keep[(np.arange(len(keep)) * GOLDEN % 1.0) * len(keep) < MOST_VOXELS]
+        index, points, height = index[keep], points[keep], height[keep]
         values = self.volume.intensity[tuple(index.T)].astype(np.float64)
         weight = np.clip(0.1 + height + LEFT_OUT_MM, 0.1, 1)
         spread = np.sqrt(normal @ self._blur @ normal + self.settings.skin_sd_mm**2)

@@ -320,7 +320,7 @@ def test_doubtful_electrodes_widen_the_region():
             covariance_mm2=np.tile(sd**2 * np.eye(3), (len(positions), 1, 1)),
             rng=np.random.default_rng(0),
         )
-        for sd in (0.1, 8.0)
+        for sd in (0.1, 8.0, 40.0)
     ]  # fmt: skip
     assert found[1].region_mm[0] > found[0].region_mm[0] + 3
     causes = [each.region_causes_mm["electrode positions"] for each in found]

@@ -39,6 +39,9 @@ LOG = logging.getLogger(__name__)
 FloatArray = NDArray[np.float64]
 
 HELD = 0.95
+FARTHEST_OFF_SKIN_MM = 12.0
+"""A drawn electrode farther than this from every vertex of the skin is put on the nearest one
+(vertices lie 5 to 12 mm apart)."""
 MEDIAN_OF_MAXWELL = 1.5382
 """Median length of a three-dimensional Gaussian displacement with unit deviation per axis."""
 
@@ -141,6 +144,7 @@ class _Doubts:
     heads: tuple[LeadField, ...]
     positions: FloatArray
     roots: FloatArray
+    skin: cKDTree
     deviations: FloatArray
     """(N, E): trials minus their mean at the sample of the peak, over N."""
 
@@ -148,6 +152,10 @@ class _Doubts:
         places = self.positions
         if rng is not None:
             places = places + np.einsum("eij,ej->ei", self.roots, rng.standard_normal(places.shape))
+            # An electrode stays on the skin however doubtful its place along it is.
+            off, vertex = self.skin.query(places)
+            lost = off > FARTHEST_OFF_SKIN_MM
+            places[lost] = self.skin.data[vertex[lost]]
         return average_reference(electrode_rows(head, places))
 
     def noise(self, rng: np.random.Generator, count: int) -> FloatArray:
@@ -246,6 +254,7 @@ def peak_region(
     probability = np.zeros(len(sources))
     causes: dict[str, float] = {}
     average = epochs.data_uv.mean(axis=0)
+    skin = cKDTree(np.asarray(lead_field.scalp_vertices_scanner_mm))
     for number, source in enumerate(peaks.source):
         sample = int(np.argmin(np.abs(epochs.times_s - peaks.time_s[number])))
         spread = epochs.data_uv[:, :, sample] - average[:, sample]
@@ -253,6 +262,7 @@ def peak_region(
             heads=(lead_field, *other_conductivities),
             positions=positions,
             roots=roots,
+            skin=skin,
             deviations=spread / max(len(spread), 1),
         )
         part, alone = _one_region(
@@ -319,8 +329,10 @@ def _one_region(
 ) -> tuple[FloatArray, dict[str, float]]:
     """Probability over the sources, and the radius that each cause makes alone."""
     distance = np.linalg.norm(sources - sources[source], axis=1)
-    near = np.flatnonzero(distance <= options.reach_mm)
     measured = [int(_peak_of(each, observed[:, None])[0]) for each in weights]
+    near = np.flatnonzero(
+        distance <= _reach(source, observed, doubts, weights[0], sources, cell, options, rng)
+    )
     heads = [_restricted(head, near) for head in doubts.heads]
     shares = np.zeros(len(near))
     width = max(cell, 3.0) / 2
@@ -347,6 +359,29 @@ def _one_region(
     if not with_causes:
         return probability, {}
     return probability, _alone(source, observed, doubts, weights, sources, measured, options, rng)
+
+
+def _reach(
+    source: int,
+    observed: FloatArray,
+    doubts: _Doubts,
+    weights: NDArray[np.float32],
+    sources: FloatArray,
+    cell: float,
+    options: RegionOptions,
+    rng: np.random.Generator,
+) -> float:
+    """How far places need to be considered: well beyond what moves a source at the peak."""
+    here = np.array([source])
+    heads = [_restricted(head, here) for head in doubts.heads]
+    fields = [
+        _fitted(doubts.rows(heads[draw % len(heads)], rng), observed)
+        for draw in range(max(8, options.n_draws // 4))
+    ]
+    stacked = np.repeat(np.hstack(fields), 8, axis=1)
+    landed = sources[_peak_of(weights, stacked + doubts.noise(rng, stacked.shape[1]))]
+    moved = float(np.percentile(np.linalg.norm(landed - sources[source], axis=1), 97.5))
+    return min(options.reach_mm, 20.0 + 2 * cell + 2 * moved)
 
 
 def _alone(

@@ -30,6 +30,9 @@ STOPPED = 130
 
 LOG_NAME = "locator-error.log"
 
+PLAIN_LINE_S = 15.0
+"""Where there is no terminal, a long stage is heard of this often."""
+
 MOST_LISTED = 12
 """Findings shown after a command; the rest is counted."""
 
@@ -244,13 +247,18 @@ class Teller:
 
     def __call__(self, stage: str, fraction: float, words: str) -> None:
         """Tell that a stage has come so far."""
+        now = time.monotonic()
         if not self.terminal:
             if fraction == 0.0:
                 self._put(f"{stage} ...\n")
             elif fraction >= 1.0:
                 self._put(f"{stage}: {words}\n")
+            elif now - self._last < PLAIN_LINE_S:
+                return
+            else:
+                self._put(f"{stage} {fraction:.0%} {words}\n")
+            self._last = now
             return
-        now = time.monotonic()
         if 0.0 < fraction < 1.0 and now - self._last < 0.1:
             return
         self._last = now

@@ -116,6 +116,8 @@ def _make(session: Path, told: Told) -> None:
                 told(stage, 1 - 0.8**number, line.partition("]")[2].strip() or line.strip())
         except BaseException:
             process.kill()
+            process.wait()
+            shutil.rmtree(part, ignore_errors=True)
             raise
     if process.returncode != 0:
         shutil.rmtree(part, ignore_errors=True)

@@ -186,8 +186,8 @@ def _read_names(inputs: Inputs, options: SessionOptions) -> None:
     asked = _asked_names(inputs, options, own)
     also = _canonical(options.also, own)
     if inputs.recording is not None:
-        without = {name.casefold() for name in also}
-        with_channel = tuple(name for name in asked if name.casefold() not in without)
+        written = {normalise_name(t) or t.strip() for t in inputs.recording.channel_names}
+        with_channel = tuple(name for name in asked if name not in also or name in written)
         channels = find_channels(inputs.recording, with_channel, also, where=str(options.eeg))
         inputs.channel_names = channels.electrode_names
     known = {name.casefold() for name in asked}

@@ -9,6 +9,7 @@ import time
 from collections.abc import Callable
 from typing import Any, TypeVar
 
+from locator.errors import FileError
 from locator.io.cache import StageCache
 from locator.pipeline import Timing
 
@@ -71,6 +72,12 @@ class Stages:
                 )
             self.cache.put(stage, key, function(*args, **settings))
             result = self.cache.get(stage, key)
+            if result is None:
+                msg = (
+                    f"What stage {stage} stored in {self.cache.folder} cannot be read back."
+                    " Check the disk, then start again."
+                )
+                raise FileError(msg)
         self.note(stage, began, kept=kept)
         return result  # type: ignore[no-any-return]
 

@@ -213,6 +213,31 @@ def _information(taken: FloatArray, slopes: FloatArray) -> FloatArray:
     return flat.T @ flat
 
 
+def _precision(
+    evidence: Evidence,
+    places: FloatArray,
+    slopes: FloatArray,
+    share: FloatArray,
+    jitter: float,
+) -> FloatArray:
+    """Curvature of the log evidence in the parameters (P, P), with the doubt of the assignment.
+
+    What the capsules would tell if their names were known, less what is lost because they are
+    not (Louis 1982, J R Stat Soc B 44:226; each name on its own). Never less than half of the
+    prior in any direction.
+    """
+    taken = share.sum(axis=1)
+    known = np.eye(slopes.shape[2]) + _information(taken, slopes) / jitter**2
+    away = evidence.points[None] - places[:, None]
+    mean = np.einsum("em,ema->ea", share, away)
+    second = np.einsum("em,ema,emb->eab", share, away, away)
+    scatter = second - mean[:, :, None] * mean[:, None, :]
+    lost = (slopes.transpose(0, 2, 1) @ scatter @ slopes).sum(axis=0) / jitter**4
+    values, vectors = np.linalg.eigh(known - lost)
+    precision: FloatArray = (vectors * np.maximum(values, 0.5)) @ vectors.T
+    return precision
+
+
 def _best_jitter(total: float, count: float) -> float:
     """Most probable jitter for a sum of squared distances over `count` pairs in two axes."""
     grid = np.exp(np.linspace(np.log(0.8), np.log(10.0), 60))
@@ -238,8 +263,7 @@ def finish_fit(
     weights = pair_log_weights(places, None, jitter, evidence)
     share, log_sum = match_sum(weights)
     taken = share.sum(axis=1)
-    precision = np.eye(model.n_parameters)
-    precision = precision + _information(taken, slopes) / jitter**2
+    precision = _precision(evidence, places, slopes, share, jitter)
     covariance = np.linalg.inv(precision)
     log_evidence = (
         log_sum

@@ -139,6 +139,7 @@ def search_cap(
         add_fit(fits, fit_cap(model, evidence, start, widths_mm=(0.2 * spacing, 5.0), origin=words))
     # All fits under the same densities, so that their evidences can be compared.
     fits.sort(key=lambda fit: -fit.log_evidence)
+    evidence = refine(fits[0], evidence)
     again: list[Fit] = []
     for fit in fits[:8]:
         add_fit(

@@ -15,6 +15,8 @@ import pytest
 from locator.io.files import sha256_of
 from locator.io.reviews import append_review
 from locator.reviews import Review
+from locator.session.inputs import read_inputs
+from locator.session.options import gather_options
 from tests.sessions import (
     NAMES_31,
     PERMUTATIONS,
@@ -109,16 +111,6 @@ def test_maps_agree_with_each_other_and_stand_on_the_scan():
     assert maps["corrected_p"].min() >= 1 / PERMUTATIONS - 1e-9
 
 
-def test_an_unchanged_run_computes_nothing_and_changes_nothing(folder):
-    before = results_in(folder)
-    done = start(run_arguments(small_session(), folder))
-    assert done.returncode == 0, done.stderr
-    kept, computed = kept_and_computed(done.stderr)
-    assert computed == NOT_STAGES
-    assert {"epochs", "skin", "markers", "labels", "head", "lead field", "test"} <= kept
-    assert results_in(folder) == before
-
-
 def test_provenance_makes_the_same_numbers_again(folder, tmp_path):
     record = json.loads((folder / "provenance.json").read_text())
     assert record["schema_version"] == 1
@@ -132,11 +124,12 @@ def test_provenance_makes_the_same_numbers_again(folder, tmp_path):
     # With the stored stages at hand every one is found again by its key, which holds inputs,
     # settings, seeds, code and versions; that a stage computed twice gives the same bytes is
     # shown by the killed runs.
-    new = tmp_path / "new"
-    shutil.copytree(folder / ".locator" / "stages", new / ".locator" / "stages")
+    new = with_stages(folder, tmp_path / "new")
     done = start(["run", "--again", str(folder / "provenance.json"), "--out", str(new)])
     assert done.returncode == 0, done.stderr
-    assert kept_and_computed(done.stderr)[1] == NOT_STAGES
+    kept, computed = kept_and_computed(done.stderr)
+    assert computed == NOT_STAGES
+    assert {"epochs", "skin", "markers", "labels", "head", "lead field", "test"} <= kept
     assert results_in(new) == results_in(folder)
 
 
@@ -154,34 +147,52 @@ def test_again_refuses_an_input_that_has_changed(folder, tmp_path):
     assert "not empty" in done.stderr
 
 
-def test_decisions_of_people_are_inputs(folder, tmp_path):
-    rows = table(folder / "electrodes.tsv")
-    taken = next(row for row in rows if row["status"] == "seen" and row["name"] == "Cz")
-    place = np.array([float(taken[f"capsule_{axis}"]) for axis in "xyz"])
-    for who, where in (("A", place), ("B", [*place, 0, 0, 2.5])):
+def decide_twice_on_cz(folder):
+    """Two people accept the capsule of Cz, a little apart."""
+    rows = {row["name"]: row for row in table(folder / "electrodes.tsv")}
+    place = np.array([float(rows["Cz"][f"capsule_{axis}"]) for axis in "xyz"])
+    for minute, (who, where) in enumerate((("A", place), ("B", np.add(place, [0, 0, 2.5])))):
         review = Review(
             who=who,
-            when=f"2026-01-31T12:0{'AB'.index(who)}:00Z",
+            when=f"2026-01-31T12:0{minute}:00Z",
             electrode="Cz",
             kind="capsule",
             place_scanner_mm=where,
         )
         append_review(folder / "review.jsonl", review, before=None)
-    before = (folder / "review.jsonl").read_bytes()
-    done = start([*run_arguments(small_session(), folder), "--strict"])
-    assert done.returncode == 4, done.stderr
-    assert "decided differently on Cz" in done.stdout
-    kept, computed = kept_and_computed(done.stderr)
-    assert {"head", "lead field", "sources"} <= kept
-    assert "reviews" in computed
+
+
+def test_decisions_and_settings_change_what_rests_on_them_and_a_second_command_waits(folder):
+    decide_twice_on_cz(folder)
+    reviews_before = (folder / "review.jsonl").read_bytes()
+    changed = [*run_arguments(small_session(), folder), "--window", "0.05", "0.3", "--strict"]
+    first = subprocess.Popen(
+        [sys.executable, "-m", "locator", *changed],
+        stdout=subprocess.PIPE,
+        stderr=subprocess.PIPE,
+        text=True,
+    )
+    lines = []
+    for line in first.stderr:
+        lines.append(line)
+        if line.startswith("epochs"):
+            break
+    second = start(run_arguments(small_session(), folder))
+    out, err = first.communicate(timeout=600)
+    assert second.returncode == 3
+    assert str(first.pid) in second.stderr
+    assert first.returncode == 4, err
+    assert "decided differently on Cz" in out
+    kept, computed = kept_and_computed("".join([*lines, err]))
+    assert {"epochs", "skin", "markers", "labels", "head", "sources", "lead field"} <= kept
+    assert {"reviews", "test", "null control"} <= computed
     after = {row["name"]: row for row in table(folder / "electrodes.tsv")}
     assert after["Cz"]["status"] == "corrected"
     assert after["Cz"]["confidence"] == "n/a"
-    assert (folder / "review.jsonl").read_bytes() == before
+    assert (folder / "review.jsonl").read_bytes() == reviews_before
     record = json.loads((folder / "provenance.json").read_text())
     reviews = [entry for entry in record["inputs"] if entry["role"] == "review"]
     assert [entry["sha256"] for entry in reviews] == [sha256_of(folder / "review.jsonl")]
-    assert "Cz" in (folder / "report.html").read_text()
 
 
 def test_inputs_are_never_changed_and_nothing_is_written_beside_them(tmp_path):
@@ -191,8 +202,14 @@ def test_inputs_are_never_changed_and_nothing_is_written_beside_them(tmp_path):
     assert names == sorted(expected)
 
 
+def with_stages(folder, out):
+    """A new output folder that has the stored stages of a finished run, to save time."""
+    shutil.copytree(folder / ".locator" / "stages", out / ".locator" / "stages")
+    return out
+
+
 def test_find_alone_writes_its_files_and_inspect_makes_a_picture(tmp_path):
-    out = tmp_path / "out"
+    out = with_stages(small_run_folder(), tmp_path / "out")
     scan = small_session() / "T1.nii.gz"
     done = start(["find", scan, "--names", ",".join(NAMES_31), "--out", out])
     assert done.returncode == 0, done.stderr
@@ -215,9 +232,10 @@ def test_find_alone_writes_its_files_and_inspect_makes_a_picture(tmp_path):
 
 
 def test_head_alone_writes_its_files(tmp_path):
-    done = start(["head", small_session() / "T1.nii.gz", "--out", tmp_path / "out"])
+    out = with_stages(small_run_folder(), tmp_path / "out")
+    done = start(["head", small_session() / "T1.nii.gz", "--out", out])
     assert done.returncode == 0, done.stderr
-    assert set(results_in(tmp_path / "out")) == {n for n in FILES if n.startswith("head/")}
+    assert set(results_in(out)) == {n for n in FILES if n.startswith("head/")}
 
 
 def test_begin_writes_a_session_file_that_run_understands(tmp_path):
@@ -231,10 +249,10 @@ def test_begin_writes_a_session_file_that_run_understands(tmp_path):
     assert 't1 = "session/T1.nii.gz"' in text
     assert "event = " in text
     assert "# not used: ECG" in text
-    out = shutil.copytree(small_run_folder(), tmp_path / "out")
-    done = start(["run", target, "--out", out, "--permutations", str(PERMUTATIONS)])
-    assert done.returncode == 0, done.stderr
-    assert {"skin", "markers", "head"} <= kept_and_computed(done.stderr)[0]
+    options = gather_options({}, target)
+    inputs = read_inputs(options, names=True, recording=True, out=tmp_path / "out")
+    assert list(inputs.channel_names) == list(NAMES_31)
+    assert options.event is not None
 
 
 def test_given_positions_need_no_capsules(folder, tmp_path):
@@ -270,35 +288,3 @@ def test_an_average_without_trials_is_accepted_and_not_tested(folder, tmp_path):
     assert table(folder / "sources" / "peaks.tsv") == []
     statistic = np.asarray(nib.load(folder / "sources" / "statistic.nii.gz").dataobj)
     assert statistic.max() > 0
-
-
-def test_what_rests_on_a_changed_setting_is_computed_again_and_a_second_command_is_refused(folder):
-    changed = [*run_arguments(small_session(), folder), "--window", "0.05", "0.3"]
-    first = subprocess.Popen(
-        [sys.executable, "-m", "locator", *changed],
-        stdout=subprocess.DEVNULL,
-        stderr=subprocess.PIPE,
-        text=True,
-    )
-    lines = []
-    for line in first.stderr:
-        lines.append(line)
-        if line.startswith("epochs"):
-            break
-    second = start(run_arguments(small_session(), folder))
-    lines.append(first.communicate(timeout=600)[1])
-    assert second.returncode == 3
-    assert str(first.pid) in second.stderr
-    assert first.returncode == 0, lines
-    kept, computed = kept_and_computed("".join(lines))
-    assert {
-        "epochs",
-        "skin",
-        "markers",
-        "labels",
-        "head",
-        "sources",
-        "lead field",
-        "inverse",
-    } <= kept
-    assert {"test", "null control"} <= computed

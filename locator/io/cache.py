@@ -26,6 +26,7 @@ import numpy as np
 from numpy.lib import format as npy
 
 from locator.io.files import write_whole
+from locator.results import Frozen
 
 logger = logging.getLogger(__name__)
 
@@ -288,7 +289,10 @@ class StageCache:
         if isinstance(value, tuple):
             inside = json.dumps([self._digest(item) for item in value])
             return hashlib.sha256(b"tuple" + inside.encode()).hexdigest()
-        return digest_of(value)
+        digest = digest_of(value)
+        if isinstance(value, Frozen):
+            self._known[id(value)] = (value, digest)
+        return digest
 
     def path(self, stage: str, key: str) -> Path:
         """File name of an entry."""

@@ -102,7 +102,7 @@ KEYS = tuple(field.name for field in fields(SessionOptions))
 
 def _text(value: Any) -> str:
     if not isinstance(value, str) or not value.strip():
-        raise ValueError("text in quotes is needed")
+        raise ValueError("text is needed (in a session file: in quotes)")
     return value.strip()
 
 

@@ -20,7 +20,9 @@ from locator.session.stages import Told, silent
 
 logger = logging.getLogger(__name__)
 
-SEED = 0
+SETTINGS = ("--seed", "0", "--amplitude-nam", "80")
+"""Of the invented session: a strong response, so that there is something to see."""
+
 PROGRAM = "synthetic_heads"
 """A program of its own, started as one: it shares no code with this package."""
 
@@ -73,12 +75,12 @@ def run_demo(out: Path, *, permutations: int | None = None, told: Told = silent)
 
 
 def _fingerprint() -> str:
-    """SHA-256 of the source of the program that makes the session, and of the seed."""
+    """SHA-256 of the source of the program that makes the session, and of its settings."""
     found = importlib.util.find_spec(PROGRAM)
     if found is None or found.origin is None:
         msg = f"The package {PROGRAM}, which makes the invented session, is not installed."
         raise DemoError(msg)
-    digest = hashlib.sha256(str(SEED).encode())
+    digest = hashlib.sha256(" ".join(SETTINGS).encode())
     for path in sorted(Path(found.origin).parent.glob("*.py")):
         digest.update(path.name.encode() + path.read_bytes())
     return digest.hexdigest()
@@ -103,7 +105,7 @@ def _make(session: Path, told: Told) -> None:
     told(stage, 0.0, "")
     part = session.with_name(f"{PART}{session.name}")
     shutil.rmtree(part, ignore_errors=True)
-    command = [sys.executable, "-m", PROGRAM, "--out", str(part), "--seed", str(SEED)]
+    command = [sys.executable, "-m", PROGRAM, "--out", str(part), *SETTINGS]
     logger.info("starting %s", " ".join(command))
     last: list[str] = []
     with subprocess.Popen(

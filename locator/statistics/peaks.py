@@ -34,8 +34,8 @@ class PeakOptions:
     ----------
     neighbourhood_mm : float
         Sources this near a peak are taken to be able to explain what it explains, mm, 5 to 50;
-        default 15 (about the 90th percentile of peak errors with one source in
-        ``tests/benchmarks/projection.py``).
+        default 15 (above the 90th percentile, 12 mm, of the peak errors of single sources on
+        spheres; ``tests/benchmarks/projection.py`` prints it).
     energy : float
         Share of the neighbourhood's field energy that is taken out, 0.5 to 1; default 0.98.
     most_patterns : int

@@ -13,6 +13,9 @@ peak of their own and are compared with that one.
 
 What no draw contains (three layers and isotropic tissue in place of a real head) is added as a
 Gaussian blur, `RegionOptions.head_model_mm`.
+
+Calibration: nothing is inflated. ``tests/benchmarks/projection.py`` prints how often the ball holds
+the true place; on spheres, with the blur off, it held 13 of 14 (too few to tell 0.95 from 0.85).
 """
 
 from __future__ import annotations

@@ -79,7 +79,7 @@ class ForwardOptions:
         exact. `auto` subdivides up to 1,000 vertices a surface.
     least_depth_mm : float
         Sources nearer to the inner skull are refused; in [0.5, 20] mm. Default 1.5; the error
-        grows towards the surface, and below about 3 mm it is told as a note.
+        grows towards the surface, and below 2.5 mm it is told as a note.
     """
 
     conductivity_s_per_m: tuple[float, float, float] = (0.33, 0.0132, 0.33)
@@ -285,14 +285,14 @@ def _check_depth(
             " these sources out."
         )
         raise ForwardError(msg)
-    close = int((near.distance_mm < 3.0).sum())
+    close = int((near.distance_mm < 2.5).sum())
     if not close:
         return []
     return [
         Finding(
             level="note",
             stage="forward",
-            problem=f"{close} of {len(places)} sources lie within 3 mm of the inner skull.",
+            problem=f"{close} of {len(places)} sources lie within 2.5 mm of the inner skull.",
             suggestion="Their fields are the least exact of all.",
             subject="sources",
             doubt=0.1,

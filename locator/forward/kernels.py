@@ -171,56 +171,104 @@ def _exact(x, y, z, triangle, out):  # type: ignore[no-untyped-def]
     out[3] = length_c / twice * (away_c * angle + height * along_c)
 
 
+BLOCK = 64
+_PER_BLOCK = 13 * BLOCK
+
+
+def pack_blocks(packed: FloatArray, center: FloatArray) -> NDArray[np.float32]:
+    """Three quadrature places, normal and area of each triangle in single precision.
+
+    Laid out in blocks of constant length, so that the far part runs on whole vectors. What is left
+    of the last block holds triangles without area, far away.
+    """
+    n = len(packed)
+    n_blocks = -(-n // BLOCK)
+    values = np.zeros((13, n_blocks * BLOCK), dtype=np.float32)
+    values[:9] = 1e6
+    corners = packed[:, CORNERS:NORMAL].reshape(n, 3, 3)
+    places = 0.5 * corners + 0.5 * packed[:, None, CENTROID:SIZE] - center
+    values[:9, :n] = places.reshape(n, 9).T
+    values[9:12, :n] = packed[:, NORMAL:TANGENTS].T
+    values[12, :n] = packed[:, AREA]
+    blocks = values.reshape(13, n_blocks, BLOCK).transpose(1, 0, 2)
+    return np.ascontiguousarray(blocks).ravel()
+
+
+@numba.njit(cache=True, nogil=True, fastmath=_FAST, inline="always")
+def _point(x, y, z, nx, ny, nz):  # type: ignore[no-untyped-def]
+    """Inverse distance, and its normal derivative at the source."""
+    inverse = np.float32(1.0) / math.sqrt(x * x + y * y + z * z + np.float32(1e-20))
+    return inverse, (x * nx + y * ny + z * nz) * inverse * inverse * inverse
+
+
 @numba.njit(cache=True, nogil=True, fastmath=_FAST)
-def layers(first, last, rows, columns, faces, same, points, weights, starts, single, double):  # type: ignore[no-untyped-def]
+def layers(  # type: ignore[no-untyped-def]
+    first, last, rows, columns, blocks, center, faces, same, points, weights, starts, single, double
+):
     """Double integrals of the two layers over pairs of triangles, rows `first` to `last`.
 
     Fills ``single[i, j]``, the integral over triangle i of the single layer of triangle j with
     unit density, and ``double[i, v]``, the integral over triangle i of the double layer (normal
     derivative at the source) with the linear hat at vertex v of the column mesh. `rows` and
-    `columns` are packed triangles, `faces` the column mesh; `same` says that both are one mesh.
+    `columns` are packed triangles, `blocks` the columns once more for the far part, about
+    `center`; `faces` the column mesh; `same` says that both are one mesh.
     """
     n = columns.shape[0]
-    place = np.empty((3, 3, n))
-    for j in range(n):
-        for m in range(3):
-            for axis in range(3):
-                place[m, axis, j] = (
-                    0.5 * columns[j, 3 * m + axis] + 0.5 * columns[j, CENTROID + axis]
-                )
-    normal = columns[:, NORMAL:TANGENTS].T.copy()
-    area = columns[:, AREA].copy()
+    n_blocks = blocks.shape[0] // _PER_BLOCK
+    layer = np.empty(n_blocks * BLOCK)
+    hats = np.empty((3, n_blocks * BLOCK))
     centroid = columns[:, CENTROID:SIZE].T.copy()
     size = columns[:, SIZE].copy()
-    layer = np.empty(n)
-    hats = np.empty((3, n))
     closeness = np.empty(n)
     value = np.empty(4)
+    part = np.empty(4 * BLOCK, dtype=np.float32)
+    third, half = np.float32(1.0 / 3.0), np.float32(0.5)
     for i in range(first, last):
         row = rows[i]
-        layer[:] = 0.0
-        hats[:] = 0.0
-        for k in range(3):
-            x = 0.5 * row[3 * k] + 0.5 * row[CENTROID]
-            y = 0.5 * row[3 * k + 1] + 0.5 * row[CENTROID + 1]
-            z = 0.5 * row[3 * k + 2] + 0.5 * row[CENTROID + 2]
-            for m in range(3):
-                qx, qy, qz = place[m, 0], place[m, 1], place[m, 2]
-                nx, ny, nz = normal[0], normal[1], normal[2]
-                hat = hats[m]
-                for j in range(n):
-                    dx, dy, dz = x - qx[j], y - qy[j], z - qz[j]
-                    inverse = 1.0 / math.sqrt(dx * dx + dy * dy + dz * dz + 1e-30)
-                    layer[j] += inverse
-                    hat[j] += (dx * nx[j] + dy * ny[j] + dz * nz[j]) * inverse * inverse * inverse
+        mx, my, mz = row[CENTROID] - center[0], row[CENTROID + 1] - center[1], row[36] - center[2]
+        ax = np.float32(0.5 * (row[0] - center[0]) + 0.5 * mx)
+        ay = np.float32(0.5 * (row[1] - center[1]) + 0.5 * my)
+        az = np.float32(0.5 * (row[2] - center[2]) + 0.5 * mz)
+        bx = np.float32(0.5 * (row[3] - center[0]) + 0.5 * mx)
+        by = np.float32(0.5 * (row[4] - center[1]) + 0.5 * my)
+        bz = np.float32(0.5 * (row[5] - center[2]) + 0.5 * mz)
+        cx = np.float32(0.5 * (row[6] - center[0]) + 0.5 * mx)
+        cy = np.float32(0.5 * (row[7] - center[1]) + 0.5 * my)
+        cz = np.float32(0.5 * (row[8] - center[2]) + 0.5 * mz)
         scale = _QUARTER_PI * row[AREA] / 9.0
+        for b in range(n_blocks):
+            block = blocks[b * _PER_BLOCK : (b + 1) * _PER_BLOCK]
+            for j in range(BLOCK):
+                x, y, z = block[j], block[j + BLOCK], block[j + 2 * BLOCK]
+                nx, ny = block[j + 9 * BLOCK], block[j + 10 * BLOCK]
+                nz = block[j + 11 * BLOCK]
+                s0, d0 = _point(ax - x, ay - y, az - z, nx, ny, nz)
+                s1, d1 = _point(bx - x, by - y, bz - z, nx, ny, nz)
+                s2, d2 = _point(cx - x, cy - y, cz - z, nx, ny, nz)
+                total, e0 = s0 + s1 + s2, d0 + d1 + d2
+                x, y, z = block[j + 3 * BLOCK], block[j + 4 * BLOCK], block[j + 5 * BLOCK]
+                s0, d0 = _point(ax - x, ay - y, az - z, nx, ny, nz)
+                s1, d1 = _point(bx - x, by - y, bz - z, nx, ny, nz)
+                s2, d2 = _point(cx - x, cy - y, cz - z, nx, ny, nz)
+                total, e1 = total + (s0 + s1 + s2), d0 + d1 + d2
+                x, y, z = block[j + 6 * BLOCK], block[j + 7 * BLOCK], block[j + 8 * BLOCK]
+                s0, d0 = _point(ax - x, ay - y, az - z, nx, ny, nz)
+                s1, d1 = _point(bx - x, by - y, bz - z, nx, ny, nz)
+                s2, d2 = _point(cx - x, cy - y, cz - z, nx, ny, nz)
+                total, e2 = total + (s0 + s1 + s2), d0 + d1 + d2
+                area = block[j + 12 * BLOCK]
+                mean = half * third * (e0 + e1 + e2)
+                part[j] = area * total
+                part[j + BLOCK] = area * (half * e0 + mean)
+                part[j + 2 * BLOCK] = area * (half * e1 + mean)
+                part[j + 3 * BLOCK] = area * (half * e2 + mean)
+            base = b * BLOCK
+            for j in range(BLOCK):
+                layer[base + j] = scale * part[j]
+                hats[0, base + j] = scale * part[j + BLOCK]
+                hats[1, base + j] = scale * part[j + 2 * BLOCK]
+                hats[2, base + j] = scale * part[j + 3 * BLOCK]
         for j in range(n):
-            weight = scale * area[j]
-            total = (hats[0, j] + hats[1, j] + hats[2, j]) / 6.0
-            layer[j] *= weight
-            hats[0, j] = weight * (0.5 * hats[0, j] + total)
-            hats[1, j] = weight * (0.5 * hats[1, j] + total)
-            hats[2, j] = weight * (0.5 * hats[2, j] + total)
             dx = row[CENTROID] - centroid[0, j]
             dy = row[CENTROID + 1] - centroid[1, j]
             dz = row[CENTROID + 2] - centroid[2, j]
@@ -392,17 +440,17 @@ def dipole_rows(  # type: ignore[no-untyped-def]
 
 
 @numba.njit(cache=True, nogil=True)
-def nearest_triangles(first, last, points, packed, distance, face, weights, angle):  # type: ignore[no-untyped-def]
-    """Nearest triangle of each point and the solid angle of the whole mesh seen from it.
-
-    Fills the distance, the triangle, the barycentric weights of the nearest place on it, and the
-    angle as a share of the full one: 1 inside a closed outward mesh, 0 outside.
-    """
+def nearest_triangles(first, last, points, packed, distance, face, weights):  # type: ignore[no-untyped-def]
+    """Nearest triangle of each point: its distance, index, and barycentric weights there."""
     for p in range(first, last):
-        best, total = np.inf, 0.0
+        best = np.inf
         x, y, z = points[p, 0], points[p, 1], points[p, 2]
         for t in range(packed.shape[0]):
             row = packed[t]
+            dx, dy, dz = row[34] - x, row[35] - y, row[36] - z
+            lower = math.sqrt(dx * dx + dy * dy + dz * dz) - row[37]
+            if lower > 0.0 and lower * lower > best:
+                continue
             ax, ay, az = row[0] - x, row[1] - y, row[2] - z
             bx, by, bz = row[3] - x, row[4] - y, row[5] - z
             cx, cy, cz = row[6] - x, row[7] - y, row[8] - z
@@ -410,14 +458,6 @@ def nearest_triangles(first, last, points, packed, distance, face, weights, angl
             cc = cx * cx + cy * cy + cz * cz
             ab, bc = ax * bx + ay * by + az * bz, bx * cx + by * cy + bz * cz
             ca = cx * ax + cy * ay + cz * az
-            a, b, c = math.sqrt(aa), math.sqrt(bb), math.sqrt(cc)
-            height = -(ax * row[9] + ay * row[10] + az * row[11])
-            total += math.atan2(height * 2.0 * row[33], a * b * c + ab * c + bc * a + ca * b)
-            lower = (
-                math.sqrt((row[34] - x) ** 2 + (row[35] - y) ** 2 + (row[36] - z) ** 2) - row[37]
-            )
-            if lower > 0.0 and lower * lower > best:
-                continue
             # Nearest place on the triangle by its Voronoi regions, from inner products alone.
             d1, d2 = aa - ab, aa - ca
             d3, d4 = ab - bb, ab - bc
@@ -454,4 +494,3 @@ def nearest_triangles(first, last, points, packed, distance, face, weights, angl
                 face[p] = t
                 weights[p, 0], weights[p, 1], weights[p, 2] = u, v, w
         distance[p] = math.sqrt(best)
-        angle[p] = -total / (2.0 * math.pi)

@@ -37,6 +37,8 @@ class Layer:
     vertices: FloatArray
     faces: IntArray
     packed: FloatArray
+    center: FloatArray
+    blocks: NDArray[np.float32]
     curls: FloatArray
     potential: sparse.csr_array
     flux: sparse.csr_array
@@ -54,12 +56,15 @@ def make_layer(
     lengths = packed[:, kernels.LENGTHS : kernels.AREA]
     area = packed[:, kernels.AREA]
     curls = -tangents * (lengths / (2 * area[:, None]))[..., None]
+    center = vertices.mean(axis=0)
     order = np.argsort(faces.ravel(), kind="stable")
     counts = np.bincount(faces.ravel(), minlength=len(vertices))
     return Layer(
         vertices=np.ascontiguousarray(vertices),
         faces=np.ascontiguousarray(faces),
         packed=packed,
+        center=center,
+        blocks=kernels.pack_blocks(packed, center),
         curls=np.ascontiguousarray(curls),
         potential=potential,
         flux=flux,
@@ -103,6 +108,8 @@ def integrate(layers: tuple[Layer, Layer, Layer], tick: Callable[[float], None])
                 last,
                 row.packed,
                 column.packed,
+                column.blocks,
+                column.center,
                 column.faces,
                 same,
                 kernels.RULE_POINTS,

@@ -51,13 +51,46 @@ def nearest_on(points: ArrayLike, vertices: FloatArray, faces: IntArray) -> Near
     packed = kernels.pack_triangles(vertices, faces)
     n = len(places)
     distance, face = np.empty(n), np.zeros(n, dtype=np.int64)
-    weights, angle = np.zeros((n, 3)), np.empty(n)
+    weights = np.zeros((n, 3))
 
     def fill(first: int, last: int) -> None:
-        kernels.nearest_triangles(first, last, places, packed, distance, face, weights, angle)
+        kernels.nearest_triangles(first, last, places, packed, distance, face, weights)
 
     in_threads(fill, n, 64)
-    return Nearest(distance, face, weights, angle > 0.5)
+    return Nearest(distance, face, weights, _inside(places, vertices, faces, packed, face, weights))
+
+
+def _inside(
+    places: FloatArray,
+    vertices: FloatArray,
+    faces: IntArray,
+    packed: FloatArray,
+    face: IntArray,
+    weights: FloatArray,
+) -> NDArray[np.bool_]:
+    """Side of the nearest feature: face, edge or vertex, by its angle-weighted normal.
+
+    Baerentzen & Aanaes 2005, IEEE Trans Vis Comput Graph 11:243-253.
+    """
+    normals = packed[:, kernels.NORMAL : kernels.TANGENTS]
+    tangents = packed[:, kernels.TANGENTS : kernels.OUTWARD].reshape(-1, 3, 3)
+    at_vertex = np.zeros_like(vertices)
+    for corner in range(3):
+        cosine = -(tangents[:, (corner + 1) % 3] * tangents[:, (corner + 2) % 3]).sum(axis=1)
+        angle = np.arccos(np.clip(cosine, -1.0, 1.0))
+        np.add.at(at_vertex, faces[:, corner], angle[:, None] * normals)
+    _, face_edges = mesh_edges(faces)
+    at_edge = np.zeros((int(face_edges.max()) + 1, 3))
+    np.add.at(at_edge, face_edges.ravel(), np.repeat(normals, 3, axis=0))
+    zero = weights <= 1e-12
+    outward = normals[face].copy()
+    on_edge = zero.sum(axis=1) == 1
+    outward[on_edge] = at_edge[face_edges[face[on_edge], zero[on_edge].argmax(axis=1)]]
+    on_vertex = zero.sum(axis=1) == 2
+    outward[on_vertex] = at_vertex[faces[face[on_vertex], weights[on_vertex].argmax(axis=1)]]
+    foot = np.einsum("pk,pkx->px", weights, vertices[faces[face]])
+    inside: NDArray[np.bool_] = ((places - foot) * outward).sum(axis=1) < 0
+    return inside
 
 
 def check_closed(vertices: FloatArray, faces: IntArray, name: str) -> None:
@@ -151,14 +184,14 @@ def check_nested(meshes: list[Mesh]) -> list[float]:
     return least
 
 
-def _bulge(vertices: FloatArray, faces: IntArray) -> FloatArray:
+def _bulge(
+    vertices: FloatArray, faces: IntArray, matrix: sparse.csr_array, edges: IntArray
+) -> FloatArray:
     """Move vertices out so that flat faces enclose about what the curved surface does.
 
     The faces of a mesh whose vertices lie on a convex surface lie inside it. The butterfly middle
     of each edge estimates how far; each vertex moves along its normal by the mean over its edges.
     """
-    edges, _ = mesh_edges(faces)
-    matrix, _ = butterfly(faces, len(vertices))
     middle = (matrix[len(vertices) :] @ vertices) - vertices[edges].mean(axis=1)
     normals = vertex_normals(vertices, faces)
     lift = np.zeros(len(vertices))
@@ -174,30 +207,46 @@ def prepare_layers(
     """Layers to integrate over, the read-out mesh on the skin, and what had to be given up."""
     findings: list[Finding] = []
     base, bends, flats = [], [], []
+    steps: list[tuple[IntArray, sparse.csr_array, IntArray, IntArray]] = []
+
+    def step_of(faces: IntArray, n: int) -> tuple[sparse.csr_array, IntArray, IntArray]:
+        # The three surfaces often share their triangles.
+        for known, matrix, fine, edges in steps:
+            if known.shape == faces.shape and np.array_equal(known, faces):
+                return matrix, fine, edges
+        matrix, fine = butterfly(faces, n)
+        edges, _ = mesh_edges(faces)
+        steps.append((faces, matrix, fine, edges))
+        return matrix, fine, edges
+
     for vertices, faces in meshes:
         if subdivided:
-            matrix, fine = butterfly(faces, len(vertices))
-            edges, _ = mesh_edges(faces)
+            matrix, fine, edges = step_of(faces, len(vertices))
             flat = np.concatenate([vertices, vertices[edges].mean(axis=1)])
             smooth = matrix @ vertices
         else:
             matrix = sparse.csr_array(sparse.eye_array(len(vertices), format="csr"))
             fine, flat, smooth = faces, vertices, vertices
         base.append((matrix, fine, smooth))
-        bends.append(smooth + _bulge(smooth, fine) - flat)
+        next_matrix, _, next_edges = step_of(fine, len(smooth))
+        bends.append(smooth + _bulge(smooth, fine, next_matrix, next_edges) - flat)
         flats.append(flat)
     shares = [np.ones(len(flat)) for flat in flats]
+    least = []
+    for k in range(2):
+        there, back, _, _ = gaps_mm((flats[k], base[k][1]), (flats[k + 1], base[k + 1][1]))
+        least.append((np.minimum(THIN_GAP_MM, 0.95 * there), np.minimum(THIN_GAP_MM, 0.95 * back)))
     for _ in range(12):
         now = [flats[k] + shares[k][:, None] * bends[k] for k in range(3)]
         unsafe = [np.zeros(len(flat), dtype=bool) for flat in flats]
         for k in range(2):
             inner, outer = (now[k], base[k][1]), (now[k + 1], base[k + 1][1])
             there, back, out, into = gaps_mm(inner, outer)
-            for near, gap, own, other, mesh in (
-                (out, there, k, k + 1, outer),
-                (into, back, k + 1, k, inner),
+            for near, gap, limit, own, other, mesh in (
+                (out, there, least[k][0], k, k + 1, outer),
+                (into, back, least[k][1], k + 1, k, inner),
             ):
-                tight = gap < THIN_GAP_MM
+                tight = gap < limit
                 unsafe[own] |= tight
                 unsafe[other][mesh[1][near.face[tight]].ravel()] = True
         change = [unsafe[k] & (shares[k] > 0) for k in range(3)]

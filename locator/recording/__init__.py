@@ -4,14 +4,9 @@ from __future__ import annotations
 
 from locator.recording.artefact import ScannerEvidence, refuse_scanner_artefact, scanner_evidence
 from locator.recording.channels import Channels, find_channels, scalp_electrodes
+from locator.recording.continuous import Continuous, check_times, prepare_recording
 from locator.recording.data import EpochOptions, Epochs, Recording
-from locator.recording.epochs import (
-    Continuous,
-    check_times,
-    cut_epochs,
-    make_epochs,
-    prepare_recording,
-)
+from locator.recording.epochs import cut_epochs, make_epochs
 from locator.recording.events import choose_event, count_events, match_event
 
 __all__ = [

@@ -15,8 +15,9 @@ from numpy.typing import NDArray
 from scipy.spatial import cKDTree
 
 from locator.geometry import icosphere
+from locator.layout.tape import star_surface
 from locator.markers import Markers
-from locator.skin import Skin
+from locator.skin import Skin, height_mm
 from synthetic_heads.cap import Cap, make_cap
 
 Array = NDArray[np.float64]
@@ -70,13 +71,13 @@ def make_point_head(
         reach = reach - 4.0 * middle * np.exp(-0.5 * (level / 6.0) ** 2)
         return reach + 16.0 * middle * np.exp(-0.5 * ((level + 22.0) / 7.0) ** 2)
 
-    ball, faces = icosphere(5)
+    ball, faces = icosphere(4)
     center = np.array([0.0, 0.0, 20.0])
 
     def from_center(out: Array) -> Array:
         """Distance from the inner centre along unit directions: a few steps from the origin's."""
         reach = np.full(len(out), 100.0)
-        for _ in range(14):
+        for _ in range(9):
             point = center + reach[:, None] * out
             length = np.linalg.norm(point, axis=1)
             reach = reach + 0.7 * (radius(point / length[:, None]) - length)
@@ -105,12 +106,8 @@ def make_point_head(
     grid = np.stack(np.meshgrid(*(np.arange(count) for count in shape), indexing="ij"), axis=-1)
     away = ((grid * grid_mm + low) - shift).reshape(-1, 3) @ turn - center
     length = np.linalg.norm(away, axis=1)
-    table_way = away / np.maximum(length, 1e-6)[:, None]
-    # Radius by the nearest mesh directions (three, weighted): smooth enough at this density.
-    near, index = cKDTree(ball).query(table_way, k=3)
-    weight = 1.0 / np.maximum(near, 1e-6)
-    reach = np.linalg.norm((vertices - shift) @ turn - center, axis=1)
-    surface = (reach[index] * weight).sum(axis=1) / weight.sum(axis=1)
+    table = star_surface(from_center, center, n_polar=91, n_azimuth=120)
+    surface = table.radius(away / np.maximum(length, 1e-6)[:, None])
     height = (length - surface).reshape(shape).astype(np.float32)
     affine = np.diag([grid_mm, grid_mm, grid_mm, 1.0])
     affine[:3, 3] = low
@@ -187,8 +184,6 @@ def make_point_cap(
     centers = centers + rng.normal(0, center_sd_mm, centers.shape)
     score = np.where(real, rng.uniform(0.85, 0.99, count), rng.uniform(0.0, 0.4, count))
     order = np.argsort(-score)
-    from locator.skin import height_mm
-
     markers = Markers(
         centers_scanner_mm=centers[order],
         covariance_mm2=np.tile(center_sd_mm**2 * np.eye(3), (count, 1, 1)),

@@ -130,14 +130,14 @@ def test_contact_points_are_the_feet_of_the_capsules(clean):
 
 def test_inferred_places_are_where_the_deviation_says(head):
     misses = []
-    for seed in range(4):
+    for seed in range(3):
         drawn = make_point_cap(head, NAMES_31, seed, n_off=6, jitter_mm=2.5, turn_deg=4.0)
         electrodes = label_markers(drawn.markers, head.skin, standard_layout(NAMES_31))
         absent = (electrodes.marker < 0) & ~drawn.cap.present
         gap = electrodes.positions_scanner_mm - drawn.cap.contacts_mm
         misses.extend((np.linalg.norm(gap, axis=1) / (np.sqrt(3) * electrodes.sd_mm))[absent])
     misses = np.array(misses)
-    assert len(misses) >= 18
+    assert len(misses) >= 14
     # Root mean square of distance over its deviation is 1 when the deviation is right.
     assert 0.5 < np.sqrt((misses**2).mean()) < 1.6
 
@@ -209,7 +209,7 @@ def test_layouts_of_ones_own(head, with_landmarks):
 
 def test_landmarks_are_estimated_near_the_true_ones():
     gaps, ratios = [], []
-    for seed in range(6):
+    for seed in range(4):
         head = make_point_head(200 + seed)
         anatomy = find_anatomy(head.skin)
         true = np.array([head.landmarks_mm[name] for name in ("NAS", "LPA", "RPA", "INI")])

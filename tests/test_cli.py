@@ -150,6 +150,15 @@ def test_a_full_session_file_is_understood_and_paths_are_relative_to_it(tmp_path
     assert set(read_session_file(path)) == set(KEYS)
 
 
+def test_what_is_written_down_does_not_depend_on_the_folder_one_stands_in(tmp_path, monkeypatch):
+    write(tmp_path / "names.txt", "Cz\n")
+    monkeypatch.chdir(tmp_path)
+    settings = gather_options({"t1": "t1.nii", "names": "names.txt"}).as_settings()
+    assert settings["t1"] == str(tmp_path / "t1.nii")
+    assert settings["names"] == str(tmp_path / "names.txt")
+    assert gather_options({"names": "Cz,Oz"}).as_settings()["names"] == "Cz,Oz"
+
+
 def test_flags_win_over_the_file(tmp_path):
     path = write(tmp_path / "s.toml", 't1 = "a.nii"\nseed = 3\ncapsule_mm = 8.0\n')
     options = gather_options({"seed": 4, "t1": "b.nii", "event": None}, path)

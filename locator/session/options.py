@@ -87,8 +87,9 @@ class SessionOptions:
         values: dict[str, Any] = {}
         for field in fields(self):
             value = getattr(self, field.name)
-            if isinstance(value, Path):
-                value = str(value.absolute())
+            names_file = field.name == "names" and isinstance(value, str) and Path(value).is_file()
+            if isinstance(value, Path) or names_file:
+                value = str(Path(value).absolute())
             values[field.name] = list(value) if isinstance(value, tuple) else value
         return values
 

@@ -8,6 +8,7 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 from scipy import ndimage
 
+from locator.errors import HeadError
 from locator.geometry import apply_affine, icosphere
 from locator.head.brain import Brain, find_brain
 from locator.head.checks import check_head
@@ -47,6 +48,12 @@ FloatArray = NDArray[np.float64]
 HULL_MM = 15.0
 """The brain is closed by a ball of this radius before rays meet it: raw brains are not
 star-shaped."""
+
+LEAST_BRAIN_MM3 = 300_000
+"""Less connected tissue than this (mm^3) is no brain of a child or an adult."""
+
+LEAST_ROOM_MM = 6.0
+"""Scalp and skull together take 9 mm and more on any vault (figures in `HeadOptions`)."""
 
 CLEAR_MM = 0.5
 """Least distance of the inner skull outside the brain's hull, along the rays."""
@@ -107,6 +114,13 @@ def build_head(
     )
     report(0.05, "finding the brain")
     brain = find_brain(grid, options.brain_threshold)
+    if int(brain.mask.sum()) < LEAST_BRAIN_MM3:
+        msg = (
+            f"Only {brain.mask.sum() / 1000:.0f} mL of connected grey and white matter were found"
+            " (stage head), too little for a brain. Check that the volume is a T1-weighted image of"
+            " a whole head in the right orientation."
+        )
+        raise HeadError(msg)
     report(0.35, "telling tissues apart")
     labels = classify(brain.corrected, brain.mask, brain.mixture)
     closed = close(brain.mask, HULL_MM)
@@ -125,6 +139,15 @@ def build_head(
     center = center + offset
     csf_level = _csf_level(brain, labels, distance)
     skull = find_skull(grid, profile_image, center, rays, ring, hull, csf_level, options)
+    above = rays[:, 2] > 0.2
+    room = float(np.median((skull.scalp - hull)[above]))
+    if room < LEAST_ROOM_MM:
+        msg = (
+            f"Only {room:.1f} mm lie between the brain and the outline of the head on the vault"
+            " (stage head): there is no skull in this volume, it looks skull-stripped."
+            " Use the T1 as the scanner delivered it."
+        )
+        raise HeadError(msg)
     report(0.7, "making the surfaces")
     inner = np.maximum(smooth_on_sphere(skull.inner, ring, 1), hull + CLEAR_MM)
     inner = limit_slope(inner, ring, angle, STEEPEST, outward=True)
@@ -144,6 +167,8 @@ def build_head(
     radii[1] = separate(radii[0], radii[1], model_rays, model_faces, least)
     radii[2] = separate(radii[1], radii[2], model_rays, model_faces, least)
     padded = np.maximum(radii[1] - wanted_outer, 0) + np.maximum(radii[2] - wanted_scalp, 0)
+    # Coarse voxels blur thin bone: one millimetre more for 2 mm voxels (no source; cautious).
+    blur = max(float(volume.voxel_mm.max()) - 1.0, 0.0)
     scalp_sd = np.full(len(model_rays), max(float(skin.sd_mm), 0.1))
     spreads = [
         (skull.inner_sd[pick] * weight).sum(axis=1),
@@ -156,7 +181,7 @@ def build_head(
                 grid.scanner_from_grid, center + model_rays * radius[:, None]
             ),
             faces=model_faces,
-            sd_mm=np.sqrt(sd**2 + (0.5 * padded) ** 2),
+            sd_mm=np.sqrt(sd**2 + blur**2 + (0.5 * padded) ** 2),
         )
         for radius, sd in zip(radii, spreads, strict=True)
     ]

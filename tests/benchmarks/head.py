@@ -1,0 +1,235 @@
+"""Figures of the head stage: real heads against what is known of them, invented heads exactly.
+
+Run with ``python tests/benchmarks/head.py [real] [invented] [perturbed]``. Real heads come from the
+package registries (see ``tests/real_heads.py``).
+"""
+
+from __future__ import annotations
+
+import resource
+import sys
+import time
+
+import nibabel as nib
+import numpy as np
+from scipy import ndimage
+
+from locator.geometry import apply_affine, mesh_volume_mm3
+from locator.head import BRAIN_STEM, CEREBELLUM, GREY, WHITE, Head, build_head
+from locator.head.morphology import close, distance_to
+from locator.head.shape import distance_to_mesh, fill_mesh
+from locator.skin import find_skin
+from locator.sources import make_sources
+from locator.volume import Volume, check_volume
+from tests import real_heads
+
+SURFACES = ("inner_skull", "outer_skull", "scalp")
+VAULT = 0.15
+"""Vault: rays that rise by more than this (sine of the elevation) from the brain's centre."""
+
+
+def read(path) -> Volume:
+    """Read a test volume."""
+    image = nib.load(path)
+    return check_volume(np.asarray(image.dataobj, dtype=np.float32).squeeze(), image.affine)
+
+
+def solve(volume: Volume) -> tuple[Head, float]:
+    """Head and processor seconds of the head stage alone (the skin stage is separate)."""
+    skin = find_skin(volume)
+    start = time.process_time()
+    head = build_head(volume, skin)
+    return head, time.process_time() - start
+
+
+def radii(head: Head, name: str) -> np.ndarray:
+    """Length of each ray up to a surface, mm."""
+    points = getattr(head, name).vertices_scanner_mm
+    return np.linalg.norm(points - head.center_scanner_mm, axis=1)
+
+
+def vault(head: Head) -> np.ndarray:
+    """Which rays go to the vault."""
+    rays = head.inner_skull.vertices_scanner_mm - head.center_scanner_mm
+    return rays[:, 2] / np.linalg.norm(rays, axis=1) > VAULT
+
+
+def voxels_inside(vertices, faces, volume_affine, shape) -> np.ndarray:
+    """Voxels of a grid that lie inside a closed scanner-space mesh."""
+    inverse = np.linalg.inv(volume_affine)
+    triangles = np.array(faces, dtype=np.int32)
+    if mesh_volume_mm3(apply_affine(inverse, vertices), triangles) < 0:
+        triangles = np.ascontiguousarray(triangles[:, ::-1])
+    return fill_mesh(apply_affine(inverse, vertices), triangles, shape)
+
+
+def inside(points, vertices, faces) -> np.ndarray:
+    """Which points lie inside a closed mesh, by half-millimetre voxels."""
+    low = np.floor(vertices.min(axis=0)) - 1
+    shape = tuple(int(n) for n in 2 * (np.ceil(vertices.max(axis=0)) - low) + 3)
+    mask = fill_mesh(2 * (np.asarray(vertices) - low), np.asarray(faces, dtype=np.int32), shape)
+    at = np.rint(2 * (points - low)).astype(int)
+    valid = ((at >= 0) & (at < shape)).all(axis=1)
+    found = np.zeros(len(points), dtype=bool)
+    found[valid] = mask[tuple(at[valid].T)]
+    return found
+
+
+def signed_distance(points, vertices, faces) -> np.ndarray:
+    """Distance to a closed mesh, negative inside, cut off at 20 mm."""
+    distance = distance_to_mesh(
+        points, np.asarray(vertices, float), np.asarray(faces, np.int32), 20.0
+    )
+    return np.where(inside(points, np.asarray(vertices, float), faces), -distance, distance)
+
+
+def dice(first, second) -> float:
+    """Overlap of two masks."""
+    return float(2 * (first & second).sum() / max(first.sum() + second.sum(), 1))
+
+
+def describe(name: str, head: Head, seconds: float) -> None:
+    """Print what needs no truth."""
+    up = vault(head)
+    bone = (radii(head, "outer_skull") - radii(head, "inner_skull"))[up]
+    skin = (radii(head, "scalp") - radii(head, "outer_skull"))[up]
+    peak = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1e6
+    print(
+        f"{name}: {seconds:.1f} s, peak of the process so far {peak:.2f} GB, brain"
+        f" {head.brain_volume_ml:.0f} mL, vault bone {bone.mean():.1f} mm (5-95 %:"
+        f" {np.percentile(bone, 5):.1f}-{np.percentile(bone, 95):.1f}), scalp {skin.mean():.1f} mm,"
+        f" {len(make_sources(head).positions_scanner_mm)} sources at 5 mm"
+    )
+    for finding in head.findings:
+        print(f"    {finding.level}: {finding.problem}")
+
+
+def s1_figures() -> None:
+    """S1 against its pial and white surfaces."""
+    volume = read(real_heads.s1())
+    head, seconds = solve(volume)
+    describe("S1", head, seconds)
+    affine, shape = volume.scanner_from_voxel, volume.intensity.shape
+    meshes = {}
+    for name in ("pia_lh", "pia_rh", "wm_lh", "wm_rh"):
+        data = nib.load(real_heads.s1_surface(name)).darrays
+        meshes[name] = (data[0].data.astype(float), data[1].data.astype(np.int32))
+    points = np.vstack([meshes["pia_lh"][0], meshes["pia_rh"][0]])
+    inner = head.inner_skull
+    share = inside(points, inner.vertices_scanner_mm, inner.faces).mean()
+    masks = {
+        kind: np.logical_or(
+            *[voxels_inside(*meshes[f"{kind}_{side}h"], affine, shape) for side in "lr"]
+        )
+        for kind in ("pia", "wm")
+    }
+    hull = close(masks["pia"], 15)
+    height = distance_to(hull) - distance_to(~hull)
+    at = apply_affine(np.linalg.inv(affine), inner.vertices_scanner_mm)
+    gap = ndimage.map_coordinates(height, at.T, order=1, mode="nearest")[vault(head)]
+    ribbon = masks["pia"] & ~masks["wm"]
+    near = (distance_to(masks["pia"]) <= 2) & (distance_to(~masks["pia"]) <= 4.5)
+    grey = np.asarray(head.tissues) == GREY
+    print(f"    pial vertices inside the inner skull: {100 * share:.2f} %")
+    print(
+        f"    inner skull minus pial hull (closed by 15 mm), vault: {gap.mean():.2f} +- {gap.std():.2f} mm"
+    )
+    print(
+        f"    grey Dice against the ribbon: {dice(grey & near, ribbon & near):.3f} in the shell from"
+        f" 2 mm outside to 4.5 mm inside the pia,"
+        f" {dice(grey & (distance_to(masks['pia']) <= 2), ribbon):.3f} with deep grey matter"
+    )
+
+
+def ch2_figures() -> None:
+    """Averaged head against its brain-extracted twin (itself automatic)."""
+    volume = read(real_heads.ch2())
+    head, seconds = solve(volume)
+    describe("ch2", head, seconds)
+    brain = np.asarray(nib.load(real_heads.ch2bet()).dataobj).squeeze() > 0
+    ours = np.isin(np.asarray(head.tissues), (GREY, WHITE, BRAIN_STEM, CEREBELLUM))
+    for radius in (8, 15):
+        first, second = close(ours, radius), close(brain, radius)
+        edges = []
+        for one, other in ((first, second), (second, first)):
+            edge = one & (distance_to(~one) < 1.5)
+            edges.append(np.abs(distance_to(other) - distance_to(~other))[edge].mean() - 0.5)
+        print(
+            f"    both closed by {radius} mm: Dice {dice(first, second):.4f},"
+            f" mean surface distance {np.mean(edges):.2f} mm"
+        )
+
+
+def invented_figures(seeds=range(1, 6)) -> None:
+    """Invented heads and the layered ball against their exact surfaces."""
+    from synthetic_heads import heads
+    from synthetic_heads.scan import make_scan
+
+    rows = []
+    for kind, seed in [("sphere", 0), *[("shaped", seed) for seed in seeds]]:
+        truth = heads.make_head(seed, kind)
+        volume = check_volume(*make_scan(truth, None, seed=seed))
+        head, seconds = solve(volume)
+        describe(f"{kind} {seed}", head, seconds)
+        up = vault(head)
+        row = []
+        for name in SURFACES:
+            off = signed_distance(getattr(head, name).vertices_scanner_mm, *truth.surfaces[name])
+            row += [np.abs(off[up]).mean(), off[up].mean(), np.abs(off[~up]).mean()]
+            print(
+                f"    {name}: vault |d| {row[-3]:.2f} mm, bias {row[-2]:+.2f}; base |d| {row[-1]:.2f}"
+            )
+        if kind == "shaped":
+            rows.append(row)
+    mean = np.mean(rows, axis=0)
+    for k, name in enumerate(SURFACES):
+        print(
+            f"mean of {len(rows)} shaped heads, {name}: vault |d| {mean[3 * k]:.2f} mm,"
+            f" bias {mean[3 * k + 1]:+.2f}; base |d| {mean[3 * k + 2]:.2f}"
+        )
+
+
+def perturbed_figures() -> None:
+    """Shift of the surfaces on the vault when a real head is disturbed."""
+    for name, path in (("S1", real_heads.s1()), ("ch2", real_heads.ch2())):
+        volume = read(path)
+        reference, _ = solve(volume)
+        image = np.asarray(volume.intensity)
+        affine = np.asarray(volume.scanner_from_voxel)
+        white = float(np.median(image[np.asarray(reference.tissues) == WHITE]))
+        ramp = np.linspace(-1, 1, image.shape[1])[None, :, None]
+        rng = np.random.default_rng(0)
+        cases = {"13 times brighter": image * 13}
+        for noise in (3, 6, 9):
+            real = image + rng.normal(0, noise / 100 * white, image.shape)
+            cases[f"noise {noise} %"] = np.hypot(
+                real, rng.normal(0, noise / 100 * white, image.shape)
+            )
+        for bias in (20, 45):
+            cases[f"bias {bias} %"] = image * (1 + bias / 100 * ramp)
+        for label, changed in cases.items():
+            head, _ = solve(check_volume(changed.astype(np.float32), affine))
+            words = []
+            for surface in SURFACES:
+                points = getattr(head, surface).vertices_scanner_mm[vault(head)]
+                other = getattr(reference, surface)
+                shift = distance_to_mesh(points, other.vertices_scanner_mm, other.faces, 20.0)
+                words.append(f"{surface} {shift.mean():.2f}")
+            print(f"{name}, {label}: mean shift on the vault, mm: {', '.join(words)}")
+
+
+def main(parts: list[str]) -> None:
+    """Print the tables asked for; all without an argument."""
+    if not parts or "real" in parts:
+        s1_figures()
+        ch2_figures()
+        volume = read(real_heads.low2mm())
+        describe("2 mm head", *solve(volume))
+    if not parts or "invented" in parts:
+        invented_figures()
+    if not parts or "perturbed" in parts:
+        perturbed_figures()
+
+
+if __name__ == "__main__":
+    main(sys.argv[1:])

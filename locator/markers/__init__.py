@@ -15,6 +15,7 @@ from locator.geometry import apply_affine, vertex_normals, voxel_sizes_mm
 from locator.markers.blobs import Grid, find_blobs
 from locator.markers.fit import BlobFit, FitSettings, Fitter
 from locator.markers.looks import capsule_probability
+from locator.markers.shift import estimate_shift
 from locator.results import Finding, Frozen, Progress
 from locator.skin import Skin, height_mm, image_on_grid, skin_normals
 from locator.volume import Volume
@@ -167,7 +168,7 @@ def find_markers(
     if not found:
         raise MarkerError(_nothing(0, options))
     tell(0.8, "comparing blobs")
-    return _ranked(volume, found, _Evidence.of(found, skin, fat), options)
+    return _ranked(volume, skin, found, _Evidence.of(found, skin, fat), options)
 
 
 def _silent(_fraction: float, _words: str) -> None:
@@ -302,17 +303,20 @@ def _above(value: FloatArray, limit: float, width: float) -> FloatArray:
 
 
 def _ranked(
-    volume: Volume, fits: list[BlobFit], seen: _Evidence, options: MarkerOptions
+    volume: Volume, skin: Skin, fits: list[BlobFit], seen: _Evidence, options: MarkerOptions
 ) -> Markers:
     centers = np.array([fit.center_mm for fit in fits])
     score, mean = seen.judge(options)
     likely = int((score > 0.5).sum())
     if likely < options.at_least:
         raise MarkerError(_nothing(likely, options))
+    shift = estimate_shift(volume, skin_normals(skin, centers), seen.height_mm, score)
+    centers = centers - shift.shift_mm
     covariance = np.array([fit.covariance_mm2 for fit in fits])
     voxel = voxel_sizes_mm(volume.scanner_from_voxel)
     axes = np.asarray(volume.scanner_from_voxel)[:3, :3] / voxel
     covariance = 2.0 * covariance + (axes * (0.05 * voxel) ** 2) @ axes.T
+    covariance = covariance + shift.covariance_mm2
     order = np.lexsort((*centers.T, -score))[: max(30, 3 * likely)]
     capsule = options.capsule_mm if options.capsule_mm is not None else float(np.exp(mean[1]))
     logger.info("Markers: %d blobs, %d look like capsules of %.1f mm", len(order), likely, capsule)
@@ -322,10 +326,11 @@ def _ranked(
         diameter_mm=seen.diameter_mm[order],
         contrast=seen.contrast[order],
         roundness=seen.roundness[order],
-        skin_mm=seen.height_mm[order],
+        skin_mm=height_mm(skin, centers)[order],
         score=score[order],
         capsule_mm=capsule,
-        shift_mm=np.zeros(3),
+        shift_mm=shift.shift_mm,
+        findings=shift.findings,
     )
 
 

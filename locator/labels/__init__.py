@@ -3,7 +3,8 @@
 from __future__ import annotations
 
 from locator.labels.anatomy import Anatomy, find_anatomy
-from locator.labels.assign import LabelOptions, contact_points, label_markers
+from locator.labels.assign import contact_points, label_markers
+from locator.labels.options import LabelOptions
 from locator.labels.result import Electrodes
 
 __all__ = [

@@ -395,8 +395,13 @@ def _tissue_threshold(coarse: Grid, share: float) -> tuple[float, float]:
 
 
 def _largest_body(mask: NDArray[np.bool_], voxel_mm: FloatArray) -> NDArray[np.bool_]:
-    """Largest connected body with its holes filled, slice by slice on three axes too."""
-    # Thin bridges to ghosts and wrapped parts are cut first.
+    """Largest connected body, its holes filled slice by slice on three axes."""
+    # Filled before the choice: bone can part the brain from the scalp all round.
+    mask = mask.copy()
+    for axis in range(3):
+        for slice_ in np.moveaxis(mask, axis, 0):
+            slice_[...] = ndimage.binary_fill_holes(slice_)
+    # Thin bridges to ghosts and wrapped parts are cut.
     solid = ndimage.binary_erosion(mask)
     labels, count = ndimage.label(solid)
     if count == 0:
@@ -404,12 +409,7 @@ def _largest_body(mask: NDArray[np.bool_], voxel_mm: FloatArray) -> NDArray[np.b
         raise SkinError(msg)
     sizes = np.bincount(labels.ravel())
     sizes[0] = 0
-    body = ndimage.binary_dilation(labels == sizes.argmax(), iterations=2) & mask
-    for axis in range(3):
-        body = np.moveaxis(body, axis, 0)
-        for slice_ in body:
-            slice_[...] = ndimage.binary_fill_holes(slice_)
-        body = np.moveaxis(body, 0, axis)
+    body: NDArray[np.bool_] = ndimage.binary_dilation(labels == sizes.argmax(), iterations=2) & mask
     litres = float(body.sum() * np.prod(voxel_mm)) / 1e6
     if not HEAD_LITRES[0] <= litres <= HEAD_LITRES[1]:
         msg = (

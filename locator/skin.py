@@ -453,9 +453,10 @@ def _first_surface(
     # closed surface too.
     away = ndimage.distance_transform_edt(~(opened | face), sampling=voxel_mm)
     back = ndimage.distance_transform_edt(away <= options.closing_mm, sampling=voxel_mm)
-    signed = np.where(back > 0, options.closing_mm - back, away)
-    # The transforms measure to voxel centres: half a voxel from the boundary between them.
-    signed += float(np.mean(voxel_mm)) / 2 * np.where(back > 0, 1, -1)
+    # The transforms measure to voxel centres, half a voxel from the boundary between them; on
+    # the way back that half is in both terms.
+    half = float(np.mean(voxel_mm)) / 2
+    signed = np.where(back > 0, options.closing_mm - back, away - half)
     signed = ndimage.gaussian_filter(signed.astype(np.float32), options.smooth_mm / voxel_mm)
     inner = tuple(slice(m, m + n) for m, n in zip(margin, body.shape, strict=True))
     return np.ascontiguousarray(signed[inner]), face[inner], box

@@ -212,6 +212,12 @@ def main() -> None:
     parser.add_argument("--permutations", type=int, default=5000)
     parser.add_argument("--nam", type=float, default=40.0)
     parser.add_argument("--head-model-mm", type=float, default=5.0)
+    parser.add_argument(
+        "--sets",
+        nargs="*",
+        choices=("assumed", "ratio", "none"),
+        default=("assumed", "ratio", "none"),
+    )
     arguments = parser.parse_args()
     world = make_world()
     print(
@@ -226,23 +232,28 @@ def main() -> None:
     }
     ratios = np.random.default_rng(99).uniform(15, 50, 10_000)
     sets = {
-        "dipole, conductivity as assumed": lambda seed: one_session(
+        "assumed": lambda seed: one_session(
             world, seed, with_dipole=True, skull=SKULL, with_null=seed < 3, **common
         ),
-        "dipole, ratio 15 to 50": lambda seed: one_session(
+        "ratio": lambda seed: one_session(
             world, seed + 500, with_dipole=True, skull=0.33 / ratios[seed], **common
         ),
-        "no dipole": lambda seed: one_session(
+        "none": lambda seed: one_session(
             world, seed + 1000, with_dipole=False, skull=SKULL, with_null=seed < 3, **common
         ),
     }
-    for title, make in sets.items():
-        rows = []
+    titles = {
+        "assumed": "dipole, conductivity as assumed",
+        "ratio": "dipole, ratio 15 to 50",
+        "none": "no dipole",
+    }
+    for name in arguments.sets:
+        make, rows = sets[name], []
         for seed in seeds:
             rows.append(make(seed))
             short = {k: round(v, 2) for k, v in rows[-1].items() if not k.endswith(" s")}
             print(f"  seed {seed}: {short}", flush=True)
-        _table(title, rows)
+        _table(titles[name], rows)
     peak = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1024
     print(f"\npeak memory {peak:.0f} MB")
 

@@ -309,7 +309,7 @@ def _working_grid(volume: Volume) -> tuple[Grid, FloatArray]:
         if 0.75 <= size <= 1.35:
             image = image if count % 2 == 0 else image.take(range(count - 1), axis)
             continue
-        step = 1.0 / size if size < 0.75 else 1.0 / round(float(size))
+        step = 1.0 / float(size)
         places = np.arange(0, count - 1 + 1e-9, step)
         places = places[: len(places) - len(places) % 2]
         image = _resample_axis(image, axis, places, max(step, 1.0))

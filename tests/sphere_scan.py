@@ -65,7 +65,7 @@ def affine(
     for axis, letter in enumerate(axes):
         world, sign = columns[letter]
         matrix[:3, axis] = turn[:, world] * sign * voxel_mm[axis]
-    shape = tuple(int(np.ceil(200 / size)) for size in voxel_mm)
+    shape = tuple(int(np.ceil(196 / size)) for size in voxel_mm)
     matrix[:3, 3] = CENTER_MM - matrix[:3, :3] @ ((np.array(shape) - 1) / 2 + 0.21)
     return matrix, (shape[0], shape[1], shape[2])
 
@@ -82,11 +82,12 @@ def scan(
     """The scene on a grid."""
     index = np.indices(shape, dtype=np.float32).reshape(3, -1)
     points = (scanner_from_voxel[:3, :3] @ index).T + scanner_from_voxel[:3, 3]
+    points = points.astype(np.float64)
     offset = points - CENTER_MM
     shift = np.array(scene.shift_mm)
-    water = _layers(offset, scanner_from_voxel, scene, fat=False)
+    image = _layers(offset, scanner_from_voxel, scene, fat=False)
     moved = offset - shift if scene.shift_scalp else offset
-    image = water + _layers(moved, scanner_from_voxel, scene, fat=True)
+    image += _layers(moved, scanner_from_voxel, scene, fat=True)
     for center in scene.centers_mm:
         _capsule(image, points - shift, center, scanner_from_voxel, scene)
     if noise:
@@ -103,6 +104,14 @@ def volume(scene: Scene, noise: float = 0.0, seed: int = 0, **grid: object) -> V
     return check_volume(scan(scene, matrix, shape, noise=noise, seed=seed), matrix)
 
 
+def _near(points: Array, center: Array, reach: float) -> NDArray[np.int64]:
+    """Indices of the points in a box round a centre."""
+    near = np.flatnonzero(np.abs(points[:, 0] - center[0]) < reach)
+    for axis in (1, 2):
+        near = near[np.abs(points[near, axis] - center[axis]) < reach]
+    return near
+
+
 def _blur(direction: Array, scanner_from_voxel: Array) -> Array:
     box = scanner_from_voxel[:3, :3].T / np.sqrt(12)
     return np.sqrt(((direction @ box.T) ** 2).sum(axis=1))
@@ -110,15 +119,20 @@ def _blur(direction: Array, scanner_from_voxel: Array) -> Array:
 
 def _layers(offset: Array, scanner_from_voxel: Array, scene: Scene, *, fat: bool) -> Array:
     """Shells of one kind: bright ones are fat, the others water."""
-    distance = np.linalg.norm(offset, axis=1)
-    blur = _blur(offset / np.maximum(distance, 1e-6)[:, None], scanner_from_voxel)
+    distance = np.sqrt(np.einsum("ij,ij->i", offset, offset))
     image = np.zeros(len(offset))
-    ends = [depth for depth, _ in scene.layers[1:]] + [np.inf]
-    for (depth, value), end in zip(scene.layers, ends, strict=True):
-        if (value > 0.9) is fat:
-            outer = ndtr((scene.radius_mm - depth - distance) / blur)
-            inner = 0.0 if np.isinf(end) else ndtr((scene.radius_mm - end - distance) / blur)
-            image += value * (outer - inner)
+    before = 0.0
+    for depth, value in scene.layers:
+        own = value if (value > 0.9) is fat else 0.0
+        if own != before:
+            under = scene.radius_mm - depth - distance
+            # Only near the boundary is the blur of a voxel to be seen.
+            near = np.flatnonzero(np.abs(under) < 4)
+            share = (under > 0).astype(np.float64)
+            blur = _blur(offset[near] / distance[near, None], scanner_from_voxel)
+            share[near] = ndtr(under[near] / blur)
+            image += (own - before) * share
+        before = own
     return image
 
 
@@ -128,7 +142,9 @@ def _capsule(
     """An ellipsoid of revolution along the normal of the sphere, in a dark housing."""
     across, along = scene.radii_mm
     normal = (center - CENTER_MM) / np.linalg.norm(center - CENTER_MM)
-    near = np.flatnonzero(np.abs(points - center).max(axis=1) < max(across, along) + 8)
+    # Voxels near the capsule, found through the grid: the points are in its order.
+    reach = max(across, along) + 8
+    near = _near(points, center, reach)
     offset = points[near] - center
     height = offset @ normal
     side = offset - height[:, None] * normal

@@ -41,7 +41,7 @@ def check_all_found(markers: Markers, truth: np.ndarray, mean_mm: float) -> None
 @pytest.mark.parametrize(
     ("radii_mm", "gap_mm", "brightness", "voxel_mm"),
     [
-        ((4.0, 3.0), 1.5, 1.1, (1.0, 1.0, 1.0)),
+        ((4.0, 3.0), 1.5, 1.1, (1.5, 1.5, 1.5)),
         ((2.0, 2.0), 0.0, 1.1, (1.0, 1.0, 1.0)),
         ((6.0, 6.0), 8.0, 0.5, (1.5, 1.5, 1.5)),
         ((6.0, 2.5), 1.0, 1.5, (1.5, 1.5, 1.5)),
@@ -65,7 +65,7 @@ def test_capsules_of_every_kind_are_found(radii_mm, gap_mm, brightness, voxel_mm
 def test_covariance_matches_the_errors():
     truth = on_the_skin(40)
     squares = []
-    for seed in range(3):
+    for seed in range(2):
         markers = found(volume(Scene(truth, brightness=0.8), noise=0.06, seed=seed))
         likely = markers.score > 0.5
         tree = cKDTree(markers.centers_scanner_mm[likely])
@@ -94,8 +94,9 @@ def test_suppressed_fat_is_named():
 def test_chemical_shift_is_estimated_when_nothing_tells_it(scalp_too):
     truth = on_the_skin(40, gap_mm=2.0)
     scene = Scene(truth, shift_mm=(0.0, 2.2, 0.0), shift_scalp=scalp_too)
-    markers = found(volume(scene, noise=0.02, voxel_mm=(1.0, 1.0, 1.0)))
-    np.testing.assert_allclose(markers.shift_mm, [0, 2.2, 0], atol=0.45)
+    markers = found(volume(scene, noise=0.02))
+    # A third of a voxel: at 1.5 mm the edge of the skin is partly that of the shifted fat.
+    np.testing.assert_allclose(markers.shift_mm, [0, 2.2, 0], atol=0.5)
     assert any("chemical shift" in f.problem for f in markers.findings)
     check_all_found(markers, truth, 0.5)
 

@@ -37,7 +37,7 @@ def test_heights_over_a_sphere_are_exact_to_a_fraction_of_a_voxel(voxel_mm):
     for over in (-2.0, 0.0, 3.0, 10.0):
         error = height_mm(skin, on_sphere(over)) - over
         # One-sided on purpose: where a voxel cannot part skin and fat, the edge lies deeper.
-        assert -0.3 < error.mean() < 0.15 + 0.25 * max(0, max(voxel_mm) - 1)
+        assert -0.3 < error.mean() < 0.2 + 0.25 * max(0, max(voxel_mm) - 1)
         assert error.std() < 0.12 * max(voxel_mm)
 
 

@@ -164,9 +164,8 @@ def _told(told: float, axis: FloatArray, fit: tuple[float, float, float] | None)
             ),
         )
     # What the sidecar and the data say, each by its own uncertainty; 3 % for the bandwidth.
-    size = (abs(slope) / error**2 + told / (0.03 * told + 1e-6) ** 2) / (
-        1 / error**2 + 1 / (0.03 * told + 1e-6) ** 2
-    )
+    precision, told_precision = spread**-2.0, (0.03 * told + 1e-6) ** -2.0
+    size = (abs(slope) * precision + told * told_precision) / (precision + told_precision)
     shift = float(np.copysign(size, slope))
     findings = [
         _finding(

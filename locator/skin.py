@@ -631,6 +631,11 @@ def _refined(first: Grid, offset: Grid, voxel_mm: FloatArray) -> Grid:
     feet = points - (first[near] * gradient[:, near]) / voxel_mm[:, None]
     height = first.copy()
     height[near] -= ndimage.map_coordinates(offset, feet, order=1, mode="nearest")
+    # Distances to a body of voxels fall short of those to a smooth one, the farther the more (its
+    # corners are always nearer). What is missing at a point is what its foot still stands over.
+    feet = points - (height[near] * gradient[:, near]) / voxel_mm[:, None]
+    missing = ndimage.map_coordinates(height, feet, order=1, mode="nearest")
+    height[near] += np.clip(missing, -2, 2)
     return height
 
 

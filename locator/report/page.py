@@ -46,6 +46,13 @@ def _number(value: float, digits: int = 1) -> str:
     return "n/a" if not np.isfinite(value) else f"{value:.{digits}f}"
 
 
+def _sure(confidence: float) -> str:
+    """Percent, never rounded up to certainty."""
+    if not np.isfinite(confidence):
+        return "n/a"
+    return "> 99.9" if confidence > 0.999 else f"{100 * confidence:.1f}"
+
+
 def _p_words(p: float, n_permutations: int) -> str:
     if not np.isfinite(p):
         return "n/a"
@@ -59,11 +66,13 @@ def _tile(run: RunResults, row: int, window: tuple[float, float]) -> dict[str, A
     name, status = electrodes.names[row], electrodes.status[row]
     capsule = np.asarray(electrodes.capsule_scanner_mm[row])
     found = bool(np.isfinite(capsule).all())
-    point = capsule if found else np.asarray(electrodes.positions_scanner_mm[row])
+    # The picture shows the oil where the scanner drew it, before the chemical shift is taken off.
+    drawn = capsule + (0.0 if run.markers is None else np.asarray(run.markers.shift_mm))
+    point = drawn if found else np.asarray(electrodes.positions_scanner_mm[row])
     confidence = float(electrodes.confidence[row])
     words = status
     if np.isfinite(confidence):
-        words += f", {100 * confidence:.0f} % sure" + (
+        words += f", {_sure(confidence)} % sure" + (
             " that none is there" if status == "inferred" else ""
         )
     residual = float(electrodes.residual_mm[row])
@@ -136,7 +145,7 @@ def _electrodes(run: RunResults, tiles: list[dict[str, Any]]) -> dict[str, Any] 
         confidence = float(electrodes.confidence[row])
         cells.append(
             {
-                "text": _number(100 * confidence, 1),
+                "text": _sure(confidence),
                 "key": confidence if np.isfinite(confidence) else 2,
             }
         )

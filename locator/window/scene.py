@@ -87,9 +87,19 @@ def _selected_point(run: RunResults, row: int) -> NDArray[np.float64]:
     return np.asarray(chosen, dtype=np.float64)
 
 
+def _drawn_point(run: RunResults, row: int) -> NDArray[np.float64]:
+    """Where the scanner drew the capsule, before the chemical shift is taken off."""
+    point = _selected_point(run, row)
+    electrodes, markers = run.electrodes, run.markers
+    assert electrodes is not None
+    if markers is None or not np.isfinite(electrodes.capsule_scanner_mm[row]).all():
+        return point
+    return point + np.asarray(markers.shift_mm)
+
+
 def slice_panel(run: RunResults, row: int, plane: str, side_px: int) -> Image.Image:
     """One orthogonal slice through the selected electrode, crosshair on its centre."""
-    center = _selected_point(run, row)
+    center = _drawn_point(run, row)
     across, upward, letters = PLANES[plane]
     scale = side_px / (2 * SLICE_HALF_MM)
     cut = sample_plane(run.volume, center, plane, half_mm=SLICE_HALF_MM, pixels_per_mm=scale)
@@ -105,7 +115,8 @@ def slice_panel(run: RunResults, row: int, plane: str, side_px: int) -> Image.Im
     assert electrodes is not None
     offset = np.asarray(electrodes.positions_scanner_mm[row]) - center
     if np.isfinite(offset).all() and np.abs(offset).max() < SLICE_HALF_MM:
-        x, y = middle + offset @ across * scale, middle - offset @ upward * scale
+        x = float(middle + offset @ across * scale)
+        y = float(middle - offset @ upward * scale)
         draw.rectangle([(x - 4, y - 4), (x + 4, y + 4)], outline=GREEN, width=2)
     font = ImageFont.load_default(size=18)
     places = (

@@ -15,8 +15,9 @@ from pathlib import Path
 import nibabel as nib
 import numpy as np
 import pytest
-from locator.io import bids
 from pybv import write_brainvision
+
+from locator.io import bids
 from tests.test_files import sample_electrodes
 
 pytestmark = pytest.mark.slow

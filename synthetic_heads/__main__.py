@@ -65,7 +65,7 @@ def _parser() -> argparse.ArgumentParser:
     add("--extra", type=int, default=2, dest="n_extra", help="blobs that are no electrode")
     add("--extra-where", choices=("anywhere", "inside", "outside"), default="anywhere")
     add("--side-marker", choices=("right", "left"), help="an extra capsule worn on that side")
-    add("--capsule-mm", type=_pair, default=(8.0, 6.0), help="diameter and height, 4 to 12")
+    add("--capsule-mm", type=_pair, default=(8.0, 6.0), help="diameter 4 to 12, height 3 to 12")
     add("--gap-mm", type=float, default=2.0, help="skin to underside of the capsule")
     add("--capsule-shape", choices=("ellipsoid", "disc"), default="ellipsoid", dest="shape")
     scan = parser.add_argument_group("scan")

@@ -236,7 +236,7 @@ def make_cap(
     side_marker : str, optional
         ``right`` or ``left``: a capsule on the cheekbone in front of that ear.
     capsule_mm : (float, float)
-        Diameter and height of a capsule, mm, 4 to 12.
+        Diameter (4 to 12) and height (3 to 12) of a capsule, mm.
     capsule_sd : float
         Relative SD of the sizes from capsule to capsule.
     gap_mm, gap_sd_mm : float
@@ -352,8 +352,9 @@ def _check(worn: tuple[str, ...], settings: Mapping[str, Any]) -> None:
     if doubled:
         msg = f"A cap cannot have a name twice: {', '.join(doubled)}."
         raise ValueError(msg)
-    if not all(4.0 <= size <= 12.0 for size in settings["capsule_mm"]):
-        msg = f"Capsules are 4 to 12 mm across and high, not {settings['capsule_mm']}."
+    across, high = settings["capsule_mm"]
+    if not (4.0 <= across <= 12.0 and 3.0 <= high <= 12.0):
+        msg = f"Capsules are 4 to 12 mm across and 3 to 12 mm high, not {settings['capsule_mm']}."
         raise ValueError(msg)
     if settings["shape"] not in ("ellipsoid", "disc"):
         msg = f"A capsule is an ellipsoid or a disc, not {settings['shape']!r}."

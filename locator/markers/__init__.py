@@ -52,7 +52,7 @@ class MarkerOptions:
     capsule_mm: float | None = None
     least_contrast: float = 0.2
     shell_mm: tuple[float, float] = (-3.0, 16.0)
-    at_least: int = 4
+    at_least: int = 5
 
     def __post_init__(self) -> None:
         """Check the ranges."""
@@ -291,7 +291,10 @@ class _Evidence:
             axis=1,
         )
         known = None if options.capsule_mm is None else float(np.log(options.capsule_mm))
-        return capsule_probability(looks, self.plausible(options), log_diameter=known)
+        plausible = self.plausible(options)
+        probability, mean = capsule_probability(looks, plausible, log_diameter=known)
+        # Likeness alone is not enough: two ears are alike too.
+        return probability * plausible, mean
 
     def plausible(self, options: MarkerOptions) -> FloatArray:
         """Plausibility of each blob by itself: soft limits of what a capsule can be."""

@@ -107,7 +107,7 @@ def _slope(along: FloatArray, heights: FloatArray) -> tuple[float, float, float]
     the fat: from there on the capsules' heights rise no further. The thickness is tried out.
     """
     slopes = np.arange(-4.5, 4.5 + 1e-9, 0.05)
-    thickness = np.array([1.2, 1.6, 2.0, 2.5, 3.0, np.inf])
+    thickness = np.array([2.0, 2.5, 3.0, np.inf])
     moved = slopes[:, None] * along
     model = np.minimum(moved[:, None, :], thickness[:, None])
     residual = heights - model

@@ -435,7 +435,7 @@ def _first_surface(
     # Where the head runs out of the volume it goes on: the rolling balls must not see an edge.
     margin = np.ceil((options.opening_mm + 4) / voxel_mm).astype(int)
     wide = np.pad(body, [(m, m) for m in margin], mode="edge")
-    depth = ndimage.distance_transform_edt(wide, sampling=voxel_mm)
+    depth = _near_distance(wide, voxel_mm, options.opening_mm)
     core = depth > options.opening_mm
     labels, count = ndimage.label(core)
     if count == 0:
@@ -447,7 +447,7 @@ def _first_surface(
     sizes = np.bincount(labels.ravel())
     sizes[0] = 0
     core = labels == sizes.argmax()
-    opened = ndimage.distance_transform_edt(~core, sampling=voxel_mm) <= options.opening_mm
+    opened = _near_distance(~core, voxel_mm, options.opening_mm) <= options.opening_mm
     face = _face_parts(depth, opened, voxel_mm, options)
     # Closing: out by the closing radius, and back. The ways out and back are distances to the
     # closed surface too.
@@ -462,12 +462,33 @@ def _first_surface(
     return np.ascontiguousarray(signed[inner]), face[inner], box
 
 
+def _near_distance(mask: NDArray[np.bool_], voxel_mm: FloatArray, reach_mm: float) -> Grid:
+    """Distance of each voxel of the mask to the nearest one outside it, exact up to a reach.
+
+    Beyond the reach any larger number stands. Least squares along one axis after the other, as
+    in exact transforms (Felzenszwalb & Huttenlocher 2012, Theory Comput 8:415), but by shifting
+    the whole grid: over a few voxels that is several times quicker.
+    """
+    square = np.full(mask.shape, (reach_mm + 1) ** 2, np.float32)
+    square[~mask] = 0
+    for axis, size in enumerate(voxel_mm):
+        best = square.copy()
+        here, there = np.moveaxis(square, axis, 0), np.moveaxis(best, axis, 0)
+        moved = np.empty_like(here)
+        for step in range(1, int(reach_mm / size + 1e-6) + 1):
+            np.add(here, np.float32((step * size) ** 2), out=moved)
+            np.minimum(there[step:], moved[:-step], out=there[step:])
+            np.minimum(there[:-step], moved[step:], out=there[:-step])
+        square = best
+    return np.sqrt(square, out=square)
+
+
 def _face_parts(
-    depth: FloatArray, opened: NDArray[np.bool_], voxel_mm: FloatArray, options: SkinOptions
+    depth: Grid, opened: NDArray[np.bool_], voxel_mm: FloatArray, options: SkinOptions
 ) -> NDArray[np.bool_]:
     """What a smaller ball still reaches and is too big for a capsule: nose and chin."""
     smaller = options.opening_mm * 2 / 3
-    reached = ndimage.distance_transform_edt(depth <= smaller, sampling=voxel_mm) <= smaller
+    reached = _near_distance(depth <= smaller, voxel_mm, smaller) <= smaller
     labels, _ = ndimage.label(reached & ~opened)
     sizes = np.bincount(labels.ravel()) * float(np.prod(voxel_mm)) / 1e3
     sizes[0] = 0

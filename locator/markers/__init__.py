@@ -156,7 +156,12 @@ def find_markers(
     tell(0.3, "fitting blobs")
     fitter = Fitter(volume, skin, FitSettings(noise_sd=skin.noise_sd))
     starts = apply_affine(skin.scanner_from_grid, blobs.places)
-    found = _distinct(_fit_all(fitter, skin, starts, blobs.diameter_mm))
+    normals = skin_normals(skin, starts)
+    looks = [
+        fitter.first_look(start, float(diameter), normal)
+        for start, diameter, normal in zip(starts, blobs.diameter_mm, normals, strict=True)
+    ]
+    found = _distinct([fit for fit in looks if fit is not None])
     if not found:
         raise MarkerError(_nothing(0, fat, options))
     # Once more, all from the size that the capsules of this scan have in common: a first scale
@@ -166,8 +171,7 @@ def find_markers(
     common = float(np.exp(seen.judge(options)[1][1]))
     centers = np.array([fit.center_mm for fit in found])
     missed = cKDTree(centers).query(starts)[0] > 0.4 * common
-    starts = np.concatenate([centers, starts[missed]])
-    found = _distinct(_fit_all(fitter, skin, starts, np.full(len(starts), common)))
+    found = _distinct(_fit_all(fitter, skin, found, starts[missed], common))
     if not found:
         raise MarkerError(_nothing(0, fat, options))
     tell(0.8, "comparing blobs")
@@ -225,13 +229,19 @@ def _local_fat(image: Grid, skin: Skin) -> _Fat:
 
 
 def _fit_all(
-    fitter: Fitter, skin: Skin, starts_mm: FloatArray, diameters_mm: FloatArray
+    fitter: Fitter, skin: Skin, found: list[BlobFit], others_mm: FloatArray, common_mm: float
 ) -> list[BlobFit]:
-    normals = skin_normals(skin, starts_mm)
-    fits = [
-        fitter.fit(start, float(diameter), normal)
-        for start, diameter, normal in zip(starts_mm, diameters_mm, normals, strict=True)
-    ]
+    """Fit blobs that were seen, and other places, all with the common diameter expected."""
+    places = np.concatenate([np.array([fit.center_mm for fit in found]), others_mm])
+    normals = skin_normals(skin, places)
+    fits = []
+    for index, (place, normal) in enumerate(zip(places, normals, strict=True)):
+        shape = None
+        if index < len(found):
+            diameter = 2 * float(np.prod(found[index].radii_mm)) ** (1 / 3)
+            if abs(np.log(diameter / common_mm)) < 0.3:
+                shape = found[index].inverse_shape
+        fits.append(fitter.fit(place, common_mm, normal, inverse_shape=shape))
     return [fit for fit in fits if fit is not None]
 
 

@@ -27,6 +27,13 @@ LEAST_VOXELS = 20
 MOST_VOXELS = 2000
 """A capsule of 12 mm on the skin fills about 1000 voxels of 1 mm and its window 2500."""
 
+RIM_MM = 2.5
+"""Beyond this distance from a blob's own surface other things begin: an ear, a neighbour, hair. The
+plastic round the oil, 1 mm, and the blur of the voxels lie within it."""
+
+FIRST_VOXELS, FIRST_STEPS = 700, 6
+"""Enough of a window, and of steps, to see whether there is a blob and of what size."""
+
 GOLDEN = (5**0.5 - 1) / 2
 """Multiples of it fill the unit interval evenly (Weyl 1916)."""
 
@@ -81,6 +88,8 @@ class BlobFit:
         Share of the variance that the blob explains where its surroundings alone cannot.
     residual : float
         Root mean square residual over the amplitude.
+    inverse_shape : (3, 3) ndarray
+        Takes offsets from the centre (mm) to where the surface is the unit sphere.
     """
 
     center_mm: FloatArray
@@ -89,6 +98,7 @@ class BlobFit:
     radii_mm: FloatArray
     explained: float
     residual: float
+    inverse_shape: FloatArray
 
 
 @dataclass(frozen=True, eq=False, slots=True)
@@ -115,15 +125,10 @@ class Fitter:
         box = np.asarray(volume.scanner_from_voxel)[:3, :3] / np.sqrt(12)
         self._blur = box @ box.T + settings.blur_mm**2 * np.eye(3)
 
-    def fit(
-        self,
-        center_mm: FloatArray,
-        diameter_mm: float,
-        normal: FloatArray,
-        *,
-        iterations: int = 12,
+    def first_look(
+        self, center_mm: FloatArray, diameter_mm: float, normal: FloatArray
     ) -> BlobFit | None:
-        """Fit one blob, starting from a centre and a diameter.
+        """Fit one blob coarsely: is there one, and of what size.
 
         Parameters
         ----------
@@ -133,23 +138,86 @@ class Fitter:
             Expected diameter, mm.
         normal : (3,) ndarray
             Outward direction of the skin nearby.
-        iterations : int
-            At most so many steps.
 
         Returns
         -------
         BlobFit or None
             None when nothing like a blob is there, or the fit leaves its start.
         """
-        window = self._window(center_mm, diameter_mm, normal)
+        shape = np.eye(3) * (2 / diameter_mm)
+        window = self._window(center_mm, shape, normal, 0.225 * diameter_mm + 2.5, FIRST_VOXELS)
         if window is None:
             return None
-        return self._descend(window, center_mm, diameter_mm, iterations)
+        found = self._descend(window, np.zeros(3), shape, diameter_mm, FIRST_STEPS)
+        return None if found is None else self._result(window, window, center_mm, *found)
+
+    def fit(
+        self,
+        center_mm: FloatArray,
+        diameter_mm: float,
+        normal: FloatArray,
+        *,
+        inverse_shape: FloatArray | None = None,
+    ) -> BlobFit | None:
+        """Fit one blob, its rim alone around it.
+
+        What is odd within the rim (an ear that touches it, a vessel) counts little in the end:
+        Cauchy weights, whose half-width is three times the scatter of the residuals.
+
+        Parameters
+        ----------
+        center_mm : (3,) ndarray
+            Start, scanner mm.
+        diameter_mm : float
+            Expected diameter, mm.
+        normal : (3,) ndarray
+            Outward direction of the skin nearby.
+        inverse_shape : (3, 3) ndarray, optional
+            Start of the shape, from a first look; a ball if not given.
+
+        Returns
+        -------
+        BlobFit or None
+            None when nothing like a blob is there, or the fit leaves its start.
+        """
+        shape = np.eye(3) * (2 / diameter_mm) if inverse_shape is None else inverse_shape
+        rim = max(RIM_MM, 1.5 * float(np.sqrt(12 * np.trace(self._blur) / 3)))
+        window = self._window(center_mm, shape, normal, rim, MOST_VOXELS)
+        if window is None:
+            return None
+        found = self._descend(window, np.zeros(3), shape, diameter_mm, 12)
+        if found is None:
+            return None
+        center, shape, state = found
+        scatter = 1.4826 * float(np.median(np.abs(state.residual)))
+        width = 3 * max(scatter, self._noise(window), self.settings.model_error * state.linear[0])
+        calm = window.weight / (1 + (state.residual / width) ** 2)
+        steady = _Window(
+            window.points, window.values, calm, window.surroundings, window.unexplained
+        )
+        again = self._descend(steady, center, shape, diameter_mm, 5)
+        if again is None:
+            return None
+        return self._result(steady, self._close(window, *again[:2]), center_mm, *again)
+
+    def _close(self, window: _Window, center: FloatArray, inverse_shape: FloatArray) -> _Window:
+        """The same window, with what lies beyond the plastic counting less and less."""
+        beyond = _from_surface(window.points - center, inverse_shape)
+        weight = window.weight * np.clip((RIM_MM - beyond) / (RIM_MM - 1), 0.02, 1)
+        return _Window(
+            window.points, window.values, weight, window.surroundings,
+            _left_over(window.values, window.surroundings, weight),
+        )  # fmt: skip
 
     def _window(
-        self, center_mm: FloatArray, diameter_mm: float, normal: FloatArray
+        self,
+        center_mm: FloatArray,
+        inverse_shape: FloatArray,
+        normal: FloatArray,
+        rim_mm: float,
+        most: int,
     ) -> _Window | None:
-        reach = 0.5 * diameter_mm * 1.45 + 2.5
+        reach = 1 / float(np.linalg.svd(inverse_shape, compute_uv=False)[-1]) + rim_mm
         middle = apply_affine(self._voxel_from_scanner, center_mm)
         span = reach * np.sqrt((self._voxel_from_scanner[:3, :3] ** 2).sum(axis=1))
         shape = np.array(self.volume.intensity.shape)
@@ -159,7 +227,7 @@ class Fitter:
             return None
         index = np.indices(high - low).reshape(3, -1).T + low
         points = apply_affine(self.volume.scanner_from_voxel, index) - center_mm
-        near = np.einsum("ij,ij->i", points, points) < reach**2
+        near = _from_surface(points, inverse_shape) < rim_mm
         index, points = index[near], points[near]
         height = ndimage.map_coordinates(
             self.skin.height_map_mm,
@@ -174,7 +242,7 @@ class Fitter:
             return None
         # More voxels than a fit needs are thinned out, evenly through the window.
         keep = np.flatnonzero(out)
-        keep = keep[(np.arange(len(keep)) * GOLDEN % 1.0) * len(keep) < MOST_VOXELS]
+        keep = keep[(np.arange(len(keep)) * GOLDEN % 1.0) * len(keep) < most]
         index, points, height = index[keep], points[keep], height[keep]
         values = self.volume.intensity[tuple(index.T)].astype(np.float64)
         weight = np.clip(0.1 + height + LEFT_OUT_MM, 0.1, 1)
@@ -187,19 +255,23 @@ class Fitter:
             along, across = points @ first / reach, points @ second / reach
             columns += [inside, inside * along, inside * across, edge, edge * along, edge * across]
         surroundings = np.stack(columns, axis=1)
-        weighted = surroundings * weight[:, None]
-        alone = _ridged(weighted.T @ surroundings)
-        plain = values - surroundings @ np.linalg.solve(alone, weighted.T @ values)
-        return _Window(points, values, weight, surroundings, float(weight @ plain**2))
+        left = _left_over(values, surroundings, weight)
+        return _Window(points, values, weight, surroundings, left)
+
+    def _noise(self, window: _Window) -> float:
+        return max(self.settings.noise_sd, 1e-6 * float(np.abs(window.values).max()), 1e-12)
 
     def _descend(
-        self, window: _Window, start_mm: FloatArray, diameter_mm: float, iterations: int
-    ) -> BlobFit | None:
+        self,
+        window: _Window,
+        center: FloatArray,
+        inverse_shape: FloatArray,
+        diameter_mm: float,
+        iterations: int,
+    ) -> tuple[FloatArray, FloatArray, _State] | None:
         """Levenberg-Marquardt over centre and shape; the rest is linear at every step."""
-        center = np.zeros(3)
-        inverse_shape = np.eye(3) * (2 / diameter_mm)
         damping = 1e-2
-        noise = max(self.settings.noise_sd, 1e-6 * float(np.abs(window.values).max()), 1e-12)
+        noise = self._noise(window)
         state = self._evaluate(window, center, inverse_shape, noise, diameter_mm)
         for iteration in range(iterations):
             if iteration in (0, 4) and self._explained(window, state) < HOPELESS[iteration]:
@@ -233,7 +305,7 @@ class Fitter:
                 return None
             if length < 0.01 and gain < 1.0:
                 break
-        return self._result(window, start_mm, center, inverse_shape, state, noise)
+        return center, inverse_shape, state
 
     def _equations(
         self, window: _Window, state: _State, noise: float
@@ -314,15 +386,16 @@ class Fitter:
     def _result(
         self,
         window: _Window,
+        evidence: _Window,
         start_mm: FloatArray,
         center: FloatArray,
         inverse_shape: FloatArray,
         state: _State,
-        noise: float,
     ) -> BlobFit | None:
         amplitude = float(state.linear[0])
         if amplitude <= 0:
             return None
+        noise = self._noise(window)
         radii = 1 / np.linalg.svd(inverse_shape, compute_uv=False)
         left = float(window.weight @ state.residual**2)
         variance = max(left / max(window.weight.sum() - 12, 1.0), noise**2)
@@ -332,13 +405,17 @@ class Fitter:
         normal += prior
         normal[np.diag_indices_from(normal)] += 1e-9 * np.trace(normal)
         covariance = np.linalg.inv(normal)[:3, :3]
+        # What the looks are judged by: nothing is played down.
+        total = float(evidence.weight @ state.residual**2)
+        seen = total / max(evidence.weight.sum() - 12, 1.0)
         return BlobFit(
             center_mm=start_mm + center,
             covariance_mm2=(covariance + covariance.T) / 2,
             amplitude=amplitude,
             radii_mm=np.sort(radii),
-            explained=self._explained(window, state),
-            residual=float(np.sqrt(variance)) / amplitude,
+            explained=self._explained(evidence, state),
+            residual=float(np.sqrt(max(seen, noise**2))) / amplitude,
+            inverse_shape=inverse_shape,
         )
 
 
@@ -358,6 +435,24 @@ _COMMON = np.zeros((6, 6))
 _COMMON[:3, :3] = 1 / 9
 _CENTRED = np.diag([1.0, 1, 1, 2, 2, 2])
 _CENTRED[:3, :3] -= 1 / 3
+
+
+def _from_surface(offset: FloatArray, inverse_shape: FloatArray) -> FloatArray:
+    """Distance of points (N, 3) from the surface of an ellipsoid, along its gradient, mm."""
+    y = offset @ inverse_shape.T
+    rho = np.sqrt(np.einsum("ij,ij->i", y, y)) + 1e-6
+    slope = y @ inverse_shape
+    steep = np.sqrt(np.einsum("ij,ij->i", slope, slope)) / rho
+    distance: FloatArray = (rho - 1) / np.maximum(steep, 1e-6)
+    return distance
+
+
+def _left_over(values: FloatArray, surroundings: FloatArray, weight: FloatArray) -> float:
+    """Weighted sum of squares that the surroundings alone leave unexplained."""
+    weighted = surroundings * weight[:, None]
+    alone = _ridged(weighted.T @ surroundings)
+    plain = values - surroundings @ np.linalg.solve(alone, weighted.T @ values)
+    return float(weight @ plain**2)
 
 
 def _ridged(normal: FloatArray) -> FloatArray:

@@ -10,7 +10,6 @@ from __future__ import annotations
 
 import argparse
 import functools
-import resource
 import subprocess
 import sys
 import tempfile
@@ -105,7 +104,9 @@ def cap_on(head: str, seed: int, **settings: Any) -> Scene:
     from synthetic_heads.cap import make_cap
     from synthetic_heads.scan import make_scan
 
-    scan.update({k: settings.pop(k) for k in ("brightness", "darken") if k in settings})
+    scan.update(
+        {k: settings.pop(k) for k in ("brightness", "darken", "housing_mm") if k in settings}
+    )
     if "extra_noise" in settings:
         scan["noise"] = 0.03 + 2 * settings.pop("extra_noise")
     body = invented_head(seed)
@@ -266,6 +267,9 @@ def at_ears(head: str, seed: int) -> Scene:
         rim = cKDTree(vertices[~kept & near]) if (~kept & near).any() else cKDTree(ear[None])
         away, _ = rim.query(vertices)
         fit = kept & near & (away > 4) & (away < 9) & (vertices[:, 2] > ear[2] - 10)
+        # On the skin beside the ear, not on the root of the ear itself.
+        even = np.einsum("ij,ij->i", smooth.normal(vertices, 12.0), smooth.normals) > 0.93
+        fit &= even
         pool = rng.permutation(np.flatnonzero(fit))
         chosen: list[Array] = []
         for index in pool:

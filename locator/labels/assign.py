@@ -17,6 +17,7 @@ from locator.labels.doubts import (
     check_sides,
     label_findings,
     reasons_against,
+    stated_confidence,
 )
 from locator.labels.matching import Evidence
 from locator.labels.options import LabelOptions
@@ -334,8 +335,8 @@ def _electrodes(
             " the names are those of the cap, and the layout if it is not a 10-20 cap."
         )
         raise LabelError(msg)
-    confidence = np.where(
-        seen, search.share[np.arange(n_names), np.maximum(chosen, 0)], search.absent
+    confidence = stated_confidence(
+        np.where(seen, search.share[np.arange(n_names), np.maximum(chosen, 0)], search.absent)
     )
 
     # Where the fitted layout expects the contact points, on the detailed skin.

@@ -7,7 +7,7 @@ stretched and deformed smoothly, slid and turned as a whole, and pulled down on 
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -61,9 +61,17 @@ class CapModel:
         n_names = len(base_mm)
         fields = [landmark_fields.reshape(-1, n_names, 3)]
         fields.append(self._stretch_fields())
-        fields.append(self._bend_fields())
+        bends = self._bend_fields()
+        fields.append(bends)
+        self.landmark_fields = landmark_fields
+        self.n_bends = len(bends)
         self.fields = np.concatenate(fields, axis=0)  # (K, E, 3), per unit deviation
         self.n_parameters = 6 + len(self.fields)
+
+    def stiffened(self, bend_mm: float = 0.8) -> CapModel:
+        """The same cap, less willing to bend; its parameters mean the same."""
+        prior = replace(self.prior, bend_mm=min(bend_mm, self.prior.bend_mm))
+        return CapModel(self.surface, self.base, self.landmark_fields, prior, self.turn)
 
     def _stretch_fields(self) -> FloatArray:
         """Displacements for one deviation of stretch, front to back and side to side."""

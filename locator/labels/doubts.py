@@ -21,6 +21,27 @@ LEAST_SCORE = 0.02
 _SIDE_REACH_MM = 75.0
 
 
+# The operator looks at what is stated below 0.9. On caps with many capsules off and strays about,
+# labels whose share of the sum is 0.9 to 0.975 are right as often as that, which is one wrong label
+# in a cap; stated a little lower, they are looked at. Knots (share, stated) from simulated caps over
+# 160 heads (points, jitter 4 mm, 6 of 61 off, 8 extra): above 0.975 two labels in a thousand caps'
+# names are wrong. Stated and true never differ by more than 0.08 in this table.
+_SHARE_KNOTS = np.array([0.0, 0.8, 0.9, 0.975, 0.99, 0.999, 1.0])
+_STATED_KNOTS = np.array([0.0, 0.8, 0.865, 0.9, 0.95, 0.996, 1.0])
+
+
+def stated_confidence(share: FloatArray) -> FloatArray:
+    """Confidence to state for labels with this share of the whole sum: never above it.
+
+    Examples
+    --------
+    >>> stated_confidence(np.array([0.5, 0.95, 0.999]))
+    array([0.5       , 0.88833333, 0.996     ])
+    """
+    stated: FloatArray = np.interp(share, _SHARE_KNOTS, _STATED_KNOTS)
+    return stated
+
+
 def alternatives_of(
     index: int,
     names: tuple[str, ...],

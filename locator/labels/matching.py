@@ -23,6 +23,7 @@ from dataclasses import dataclass, field
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.stats import ncx2
 
 from locator.labels.cap import CapModel
 
@@ -30,10 +31,20 @@ FloatArray = NDArray[np.float64]
 
 
 _NEGLIGIBLE = -12.0
+# An electrode without capsule still has its holder: few stray blobs lie closer than this to it
+# (gel, a capsule that slipped out of its holder). Common practice, no source.
+HOLDER_REACH_MM = 12.0
+_STRAY_ON_HOLDER = 0.1
+# Standard deviation of an electrode's place before anything is known of the cap.
+_BLIND_MM = 15.0
 
 
 def match_sum(
-    log_weights: FloatArray, *, n_turns: int = 200, tolerance: float = 1e-6
+    log_weights: FloatArray,
+    apart: FloatArray | None = None,
+    *,
+    n_turns: int = 200,
+    tolerance: float = 1e-6,
 ) -> tuple[FloatArray, float]:
     """Share of every pair in the sum over partial matchings, and the log of the sum.
 
@@ -41,6 +52,9 @@ def match_sum(
     ----------
     log_weights : (E, M) ndarray
         Log weight of each pair against both staying alone.
+    apart : (E, M) ndarray, optional
+        Factor (0 to 1) by which the weight of an arrangement falls when this name has no capsule
+        and this capsule no name: a stray blob cannot lie where the bare holder is. Default 1.
     n_turns : int
         Most message rounds.
     tolerance : float
@@ -57,6 +71,12 @@ def match_sum(
     >>> share, log_sum = match_sum(np.log(np.array([[3.0]])))
     >>> round(float(share[0, 0]), 6), round(float(np.exp(log_sum)), 6)
     (0.75, 4.0)
+
+    Half the weight for both alone:
+
+    >>> share, log_sum = match_sum(np.log(np.array([[3.0]])), np.array([[0.5]]))
+    >>> round(float(share[0, 0]), 6), round(float(np.exp(log_sum)), 6)
+    (0.857143, 3.5)
     """
     # Capsules that no name can reach stay alone, whatever the messages say.
     reached = np.flatnonzero(log_weights.max(axis=0, initial=-np.inf) > _NEGLIGIBLE)
@@ -65,30 +85,43 @@ def match_sum(
         if len(reached) == 0:
             return share, 0.0
         share[:, reached], log_sum = match_sum(
-            log_weights[:, reached], n_turns=n_turns, tolerance=tolerance
+            log_weights[:, reached],
+            None if apart is None else apart[:, reached],
+            n_turns=n_turns,
+            tolerance=tolerance,
         )
         return share, log_sum
     weight = np.exp(np.clip(log_weights, -60.0, 60.0))
-    to_row = np.ones_like(weight)  # message from column j to row i
+    lost = np.zeros_like(weight) if apart is None else 1.0 - apart
+    # Every message says two things, against "something else": that the other end would match
+    # (`..._match`), and that it allows this end to stay alone (`..._alone`).
+    row_match, row_alone = weight.copy(), np.ones_like(weight)
     share = np.zeros_like(weight)
-    to_column = to_row
     for turn in range(n_turns):
-        flow = weight * to_row
-        to_column = 1.0 / (1.0 + (flow.sum(axis=1, keepdims=True) - flow))
-        flow = weight * to_column
-        to_row = 1.0 / (1.0 + (flow.sum(axis=0, keepdims=True) - flow))
+        row_free, row_rest = _cavity(row_match, row_alone, axis=1)
+        column_match, column_alone = weight / row_rest, 1.0 - row_free / row_rest * lost
+        column_free, column_rest = _cavity(column_match, column_alone, axis=0)
+        row_match, row_alone = weight / column_rest, 1.0 - column_free / column_rest * lost
         if turn % 4 == 3:
-            product = weight * to_row * to_column
-            new = product / (1.0 + product)
+            new = row_match / (np.prod(row_alone, axis=1) + row_match.sum(axis=1))[:, None]
             change = float(np.abs(new - share).max()) if new.size else 0.0
             share = new
             if change < tolerance:
                 break
-    flow = weight * to_row
-    log_rows = np.log1p(flow.sum(axis=1)).sum()
-    log_columns = np.log1p((weight * to_column).sum(axis=0)).sum()
-    product = weight * to_row * to_column
-    return product / (1.0 + product), float(log_rows + log_columns - np.log1p(product).sum())
+    row_free, row_rest = _cavity(row_match, row_alone, axis=1)
+    column_match, column_alone = weight / row_rest, 1.0 - row_free / row_rest * lost
+    column_free, column_rest = _cavity(column_match, column_alone, axis=0)
+    rows = np.prod(row_alone, axis=1) + row_match.sum(axis=1)
+    columns = np.prod(column_alone, axis=0) + column_match.sum(axis=0)
+    pairs = 1.0 + (weight - row_free * column_free * lost) / (row_rest * column_rest)
+    log_sum = float(np.log(rows).sum() + np.log(columns).sum() - np.log(pairs).sum())
+    return row_match / rows[:, None], log_sum
+
+
+def _cavity(match: FloatArray, alone: FloatArray, *, axis: int) -> tuple[FloatArray, FloatArray]:
+    """What each end says without one neighbour: weight of staying alone, and of all but it."""
+    free = np.prod(alone, axis=axis, keepdims=True) / alone
+    return free, free + (match.sum(axis=axis, keepdims=True) - match)
 
 
 @dataclass(kw_only=True)
@@ -152,6 +185,25 @@ def pair_log_weights(
     odds = np.log((1 - evidence.absent) / evidence.absent) - np.log(evidence.stray_per_mm2)
     weights: FloatArray = log_density + odds + evidence.log_ratio[None, :]
     return weights
+
+
+def holder_factor(
+    places: FloatArray, spread: FloatArray, jitter_mm: float, points: FloatArray
+) -> FloatArray:
+    """How much rarer a stray blob is at each point, were the holder of each name bare; (E, M).
+
+    One less the chance that the holder lies within `HOLDER_REACH_MM` of the blob, for a holder
+    that is spread evenly in two directions about the place where it is expected.
+    """
+    variance = 0.5 * np.einsum("eaa->e", spread) + jitter_mm**2
+    gap = np.linalg.norm(points[None] - places[:, None], axis=2)
+    deviation = np.broadcast_to(np.sqrt(variance)[:, None], gap.shape)
+    near = gap < HOLDER_REACH_MM + 4.0 * deviation
+    factor = np.ones_like(gap)
+    factor[near] -= (1.0 - _STRAY_ON_HOLDER) * ncx2.cdf(
+        (HOLDER_REACH_MM / deviation[near]) ** 2, 2, (gap[near] / deviation[near]) ** 2
+    )
+    return factor
 
 
 def _jitter_log_prior(jitter_mm: float) -> float:
@@ -238,6 +290,42 @@ def _precision(
     return precision
 
 
+def _without_own(
+    evidence: Evidence,
+    places: FloatArray,
+    normals: FloatArray,
+    spread: FloatArray,
+    share: FloatArray,
+    jitter: float,
+) -> tuple[FloatArray, FloatArray]:
+    """Where the other electrodes alone expect each name, and the covariance of that place.
+
+    The fit has been pulled towards the very capsule whose label is to be judged; here each
+    name's own pull and information are taken out again (the cavity of expectation propagation,
+    Minka 2001, UAI 17:362).
+    """
+    first = np.cross(normals, np.array([0.0, 0.0, 1.0]))
+    weak = np.linalg.norm(first, axis=1) < 0.2
+    first[weak] = np.cross(normals[weak], np.array([1.0, 0.0, 0.0]))
+    first /= np.linalg.norm(first, axis=1, keepdims=True)
+    frame = np.stack([first, np.cross(normals, first)], axis=2)  # (E, 3, 2)
+    turned = frame.transpose(0, 2, 1)
+    away = np.einsum("eka,ema->emk", turned, evidence.points[None] - places[:, None])
+    taken = share.sum(axis=1)
+    pull = np.einsum("em,emk->ek", share, away)
+    scatter = np.einsum("em,emk,eml->ekl", share, away, away) - pull[:, :, None] * pull[:, None]
+    own = taken[:, None, None] * np.eye(2) / jitter**2 - scatter / jitter**4
+    values, vectors = np.linalg.eigh(np.linalg.inv(turned @ spread @ frame) - own)
+    # No place is less sure than a cap that is put on with closed eyes.
+    values = np.maximum(values, 1.0 / _BLIND_MM**2)
+    cavity = (vectors / values[:, None, :]) @ vectors.transpose(0, 2, 1)
+    moved = np.einsum("ekl,el->ek", cavity, pull) / jitter**2
+    return (
+        places - np.einsum("eak,ek->ea", frame, moved),
+        frame @ cavity @ turned,
+    )
+
+
 def _best_jitter(total: float, count: float) -> float:
     """Most probable jitter for a sum of squared distances over `count` pairs in two axes."""
     grid = np.exp(np.linspace(np.log(0.8), np.log(10.0), 60))
@@ -246,22 +334,15 @@ def _best_jitter(total: float, count: float) -> float:
     return float(grid[int(score.argmax())])
 
 
-# An electrode without capsule still has its holder: no stray blob lies closer than this to it.
-HOLDER_REACH_MM = 12.0
-# Odds of every label are divided by this before they are stated: densities of strays and absent
-# capsules are estimates from one cap. From simulated caps over many heads (jitter 4 mm, 6 off,
-# 8 extra): without it labels stated at 0.93 were right in 0.80, with it stated and true agree to
-# 0.05, on the cautious side.
-_CAUTION = 3.0
-
-
 def finish_fit(
     model: CapModel, evidence: Evidence, parameters: FloatArray, jitter: float, origin: str
 ) -> Fit:
     """Evidence of a fit (Laplace about its maximum) and the shares with the cap's own doubt."""
     places, slopes, normals = model.linear(parameters)
     weights = pair_log_weights(places, None, jitter, evidence)
-    share, log_sum = match_sum(weights)
+    none = np.zeros((len(places), 3, 3))
+    apart = holder_factor(places, none, jitter, evidence.points)
+    share, log_sum = match_sum(weights, apart)
     taken = share.sum(axis=1)
     precision = _precision(evidence, places, slopes, share, jitter)
     covariance = np.linalg.inv(precision)
@@ -276,8 +357,10 @@ def finish_fit(
         - 0.5 * np.log(4 * max(float(taken.sum()), 1.0) + 1 / _JITTER_LOG_SD**2)
     )
     spread = (slopes @ covariance) @ slopes.transpose(0, 2, 1)
-    weights = pair_log_weights(places, spread, jitter, evidence) - np.log(_CAUTION)
-    share, _ = match_sum(weights)
+    others_places, others_spread = _without_own(evidence, places, normals, spread, share, jitter)
+    weights = pair_log_weights(others_places, others_spread, jitter, evidence)
+    apart = holder_factor(others_places, others_spread, jitter, evidence.points)
+    share, _ = match_sum(weights, apart)
     return Fit(
         model=model,
         parameters=parameters,

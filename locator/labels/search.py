@@ -93,6 +93,9 @@ def name_spacing_mm(places: FloatArray) -> float:
     return float(np.median(gaps.min(axis=1)))
 
 
+_EVEN_ODDS = float(np.log(0.5))
+
+
 def choose(share: FloatArray, absent: FloatArray) -> NDArray[np.int32]:
     """The labelling with the most expected right decisions, each name with one capsule or none."""
     n_names, n_points = share.shape
@@ -152,7 +155,15 @@ def search_cap(
                 origin=fit.origin,
             ),
         )
-    penalty = {id(model): 0.0}
+    # A stiff cap is as likely as a soft one: the capsules tell which (nothing if they cannot).
+    stiff = model.stiffened()
+    penalty = {id(model): _EVEN_ODDS, id(stiff): _EVEN_ODDS}
+    top = max(fit.log_evidence for fit in again)
+    for fit in [one for one in again if one.log_evidence > top - 6.0]:
+        start = fit.parameters.copy()
+        start[-model.n_bends :] = 0.0
+        widths = (max(fit.jitter_mm, 1.0),)
+        add_fit(again, fit_cap(stiff, evidence, start, widths_mm=widths, origin=fit.origin))
     for words, other, log_odds in other_models:
         penalty[id(other)] = log_odds
         start = coarse_starts(other, evidence, n_best=1)[0]
@@ -177,7 +188,7 @@ def search_cap(
     )
 
 
-def refine(fit: Fit, evidence: Evidence, *, reach_mm: float = 25.0) -> Evidence:
+def refine(fit: Fit, evidence: Evidence, *, reach_mm: float = 16.0) -> Evidence:
     """Density of strays and share of absent capsules, from a fit."""
     taken_names = fit.share.sum(axis=1)
     taken_points = fit.share.sum(axis=0)

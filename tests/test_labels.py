@@ -74,6 +74,25 @@ def test_matching_sums_are_exact_without_loops():
     assert abs(log_sum - log_exact) < 1e-5
 
 
+def test_a_bare_holder_keeps_strays_away():
+    # One name and three blobs have no loops: the sum is exact.
+    weight, apart = np.array([[3.0, 0.5, 1.0]]), np.array([[0.2, 0.5, 1.0]])
+    alone = apart.prod()
+    total = alone + weight.sum()
+    share, log_sum = match_sum(np.log(weight), apart)
+    np.testing.assert_allclose(share, weight / total, atol=1e-6)
+    assert log_sum == pytest.approx(np.log(total), abs=1e-6)
+
+
+def test_a_blob_beside_a_bare_place_is_less_likely_a_stray_the_nearer_it_is():
+    head = make_point_head(11)
+    drawn = make_point_cap(head, NAMES_31, 3, jitter_mm=3.0)
+    electrodes = label_markers(drawn.markers, head.skin, standard_layout(NAMES_31))
+    near = electrodes.residual_mm < 4.0
+    assert near.sum() > 10
+    assert electrodes.confidence[near].min() > 0.98
+
+
 def test_choice_gives_each_capsule_once():
     share = np.array([[0.6, 0.38], [0.7, 0.05]])
     assert choose(share, 1 - share.sum(axis=1)).tolist() == [1, 0]
@@ -288,6 +307,41 @@ def test_a_side_marker_that_contradicts_stops_the_job(head):
     markers, layout = _with_side_marker(head, "left")
     with pytest.raises(SideError, match=r"right side.*left"):
         label_markers(markers, head.skin, layout, options=LabelOptions(side_marker="right"))
+
+
+# A layout that is not its own mirror image.
+ONE_SIDED = tuple(name for name in NAMES_31 if name not in ("F7", "P3"))
+
+
+def _mirrored(head, markers):
+    """Head and capsules as a scan with exchanged sides shows them."""
+    flip = np.diag([-1.0, 1.0, 1.0])
+    skin = dataclasses.replace(
+        head.skin,
+        vertices_scanner_mm=head.skin.vertices_scanner_mm @ flip,
+        faces=head.skin.faces[:, ::-1],
+        scanner_from_grid=np.diag([-1.0, 1.0, 1.0, 1.0]) @ head.skin.scanner_from_grid,
+    )
+    return skin, dataclasses.replace(markers, centers_scanner_mm=markers.centers_scanner_mm @ flip)
+
+
+@pytest.mark.parametrize("seed", [1, 2])
+def test_a_one_sided_layout_tells_a_mirrored_scan(seed):
+    head = make_point_head(7000 + seed)
+    markers = make_point_cap(head, ONE_SIDED, seed, jitter_mm=2.5, n_off=1, n_extra=1).markers
+    layout = standard_layout(ONE_SIDED)
+    straight = label_markers(markers, head.skin, layout)
+    assert "times better than with left and right exchanged" in straight.side_basis
+    assert not [one for one in straight.findings if "exchanged" in one.problem]
+    skin, markers = _mirrored(head, markers)
+    exchanged = label_markers(markers, skin, layout)
+    first = exchanged.findings[0]
+    assert "left and right exchanged" in first.problem
+    assert exchanged.confidence.max() < 0.1
+
+
+def test_a_symmetric_layout_says_that_it_cannot_tell_sides(clean):
+    assert "its own mirror image" in clean[1].side_basis
 
 
 def test_a_side_marker_that_is_not_there_is_a_finding(head):

@@ -16,6 +16,7 @@ from locator.labels.doubts import (
     alternatives_of,
     check_sides,
     label_findings,
+    mirrored_probability,
     reasons_against,
     stated_confidence,
 )
@@ -339,6 +340,8 @@ def _electrodes(
         np.where(seen, search.share[np.arange(n_names), np.maximum(chosen, 0)], search.absent)
     )
 
+    confidence = confidence * (1.0 - mirrored_probability(search))
+
     # Where the fitted layout expects the contact points, on the detailed skin.
     fitted = project_to_skin(skin, best.places)
     centers = np.asarray(markers.centers_scanner_mm)
@@ -384,7 +387,7 @@ def _electrodes(
         alternatives_of(index, names, search, marker, usable) for index in range(n_names)
     )
     why_not = reasons_against(markers, names, search, marker, usable, fitted, heights, looks)
-    side_basis, side_findings = check_sides(markers, options, anatomy, marker, looks)
+    side_basis, side_findings = check_sides(markers, options, anatomy, marker, looks, search)
     findings = label_findings(
         options,
         layout,

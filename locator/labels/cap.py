@@ -73,6 +73,13 @@ class CapModel:
         prior = replace(self.prior, bend_mm=min(bend_mm, self.prior.bend_mm))
         return CapModel(self.surface, self.base, self.landmark_fields, prior, self.turn)
 
+    def mirrored(self) -> CapModel:
+        """The same cap with left and right exchanged, as a mirrored image would show it."""
+        axes = self.surface.axes
+        flip = axes.T @ np.diag([-1.0, 1.0, 1.0]) @ axes
+        base = self.surface.project(self.center + (self.base - self.center) @ flip)
+        return CapModel(self.surface, base, self.landmark_fields @ flip, self.prior, self.turn)
+
     def _stretch_fields(self) -> FloatArray:
         """Displacements for one deviation of stretch, front to back and side to side."""
         local = (self.base - self.center) @ self.surface.axes.T

@@ -115,17 +115,78 @@ def reasons_against(
     return tuple(reasons)
 
 
+# Scans whose left and right are exchanged: one in a thousand (no source; common sense).
+_MIRRORED_LOG_PRIOR = float(np.log(1e-3))
+# Odds of a layout that is not its own mirror image above which a person should look: 1 to 20.
+_MIRRORED_LOOK = float(np.log(0.05))
+
+
+def mirrored_probability(search: Search) -> float:
+    """Probability that left and right are exchanged, from the capsules alone; 0 if they are mute."""
+    if search.mirror_log_odds is None:
+        return 0.0
+    return float(
+        1.0 / (1.0 + np.exp(-np.clip(search.mirror_log_odds + _MIRRORED_LOG_PRIOR, -50, 50)))
+    )
+
+
+def _mirror_words(search: Search) -> tuple[str, list[Finding]]:
+    """What the layout itself says of left and right."""
+    odds = search.mirror_log_odds
+    if odds is None:
+        return "the layout is its own mirror image, so the capsules say nothing of sides", []
+    if odds < _MIRRORED_LOOK:
+        power = int(min(-odds / np.log(10.0), 9.0))
+        return (
+            f"the capsules fit this layout at least 10^{power} times better than with left and"
+            " right exchanged",
+            [],
+        )
+    better = odds > 0
+    doubt = float(np.clip(0.6 + 0.39 * mirrored_probability(search), 0.6, 0.99))
+    how = "better" if better else "almost as well"
+    finding = Finding(
+        level="look",
+        stage="labels",
+        problem=(
+            f"The capsules fit this layout {how} with left and right exchanged (log of the odds"
+            f" {odds:+.1f}). Either the image is mirrored, or the names are not those of this cap."
+        ),
+        suggestion=(
+            "Check the conversion of the scan and one electrode whose side you know before using"
+            " any side of this result."
+        ),
+        doubt=doubt,
+    )
+    return f"but the capsules fit this layout {how} with left and right exchanged", [finding]
+
+
 def check_sides(
     markers: Markers,
     options: LabelOptions,
     anatomy: Anatomy,
     marker: NDArray[np.int32],
     looks: FloatArray,
+    search: Search,
 ) -> tuple[str, list[Finding]]:
     """What left and right rest on; a side marker must agree with the image."""
     basis = "the image's affine (scanner axes)"
     if options.landmarks_scanner_mm is not None:
         basis += ", and the given LPA and RPA agree"
+    words, doubts = _mirror_words(search)
+    said, findings = _check_side_marker(basis, markers, options, anatomy, marker, looks)
+    return f"{said}; {words}", [*findings, *doubts]
+
+
+def _check_side_marker(
+    basis: str,
+    markers: Markers,
+    options: LabelOptions,
+    anatomy: Anatomy,
+    marker: NDArray[np.int32],
+    looks: FloatArray,
+) -> tuple[str, list[Finding]]:
+    """What a side marker adds to `basis`."""
     if options.side_marker is None:
         return f"{basis}; no side marker", []
     free = np.setdiff1d(np.arange(len(markers.score)), marker[marker >= 0])

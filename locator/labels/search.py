@@ -33,6 +33,7 @@ class Search:
     absent: FloatArray  # (E,) posterior probability of no capsule
     chosen: NDArray[np.int32]  # (E,) capsule of each name, -1 for none
     evidence: Evidence
+    mirror_log_odds: float | None = None  # of the cap exchanged left for right; None: cannot tell
 
 
 def coarse_starts(model: CapModel, evidence: Evidence, *, n_best: int) -> list[FloatArray]:
@@ -105,6 +106,26 @@ def choose(share: FloatArray, absent: FloatArray) -> NDArray[np.int32]:
     chosen = np.full(n_names, -1, dtype=np.int32)
     chosen[rows] = np.where(columns < n_points, columns, -1)
     return chosen
+
+
+def mirror_log_odds(best: Fit, evidence: Evidence) -> float | None:
+    """Log of how much better the capsules fit the cap with left and right exchanged.
+
+    Returns
+    -------
+    float or None
+        None when the layout is its own mirror image, so that the capsules say nothing of sides.
+    """
+    model = best.model
+    mirrored = model.mirrored()
+    gap = np.linalg.norm(mirrored.base[:, None] - model.base[None], axis=2)
+    if max(gap.min(axis=0).max(), gap.min(axis=1).max()) < 0.5 * name_spacing_mm(model.base):
+        return None
+    start = np.zeros_like(best.parameters)
+    start[:6] = best.parameters[:6] * np.array([1.0, -1.0, -1.0, -1.0, 1.0, 1.0])
+    widths = (11.0, 8.0, 6.0, 4.0)
+    others = [fit_cap(mirrored, evidence, one, widths_mm=widths) for one in (start, 0.0 * start)]
+    return max(fit.log_evidence for fit in others) - best.log_evidence
 
 
 def search_cap(
@@ -185,6 +206,7 @@ def search_cap(
         absent=absent,
         chosen=choose(share, absent),
         evidence=evidence,
+        mirror_log_odds=mirror_log_odds(fits[0], evidence),
     )
 
 

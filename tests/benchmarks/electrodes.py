@@ -3,6 +3,7 @@
     python -m tests.benchmarks.electrodes                      # real heads, three seeds each
     python -m tests.benchmarks.electrodes --heads synthetic --seeds 20
     python -m tests.benchmarks.electrodes --heads points --seeds 100   # labels alone, no image
+    python -m tests.benchmarks.electrodes --refusals           # scans that must be refused
     python -m tests.benchmarks.electrodes --quick              # a few minutes, for every change
 
 A label is right when the electrode stands within 4 mm of the true contact point of its name (6 mm
@@ -16,8 +17,9 @@ from __future__ import annotations
 import argparse
 import sys
 import time
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, field
+from multiprocessing import Pool
 from pathlib import Path
 from typing import Any
 
@@ -31,7 +33,7 @@ from scipy.spatial.transform import Rotation
 
 from locator.errors import LocatorError
 from locator.labels import Electrodes, label_markers
-from locator.layout import standard_layout
+from locator.layout import Layout, standard_layout
 from locator.markers import Markers, find_markers
 from locator.skin import find_skin
 from locator.volume import check_volume
@@ -287,100 +289,151 @@ def regrid(
     return np.maximum(out, 0).astype(np.float32), target
 
 
-def real_cases(condition: Condition, seeds: range, heads: tuple[str, ...]) -> Iterator[Case]:
-    """Capsules painted on real heads."""
-    for which in heads:
-        for seed in seeds:
-            image, affine, truth = painted_head(
-                which,
-                CAPS[condition.count],
-                seed,
-                brightness=condition.brightness,
-                extra_noise=condition.noise,
-                shift_mm=(0.0, condition.shift_voxels, 0.0),
-                **condition.cap,
-            )
-            image, affine = regrid(image, affine, condition)
-            template = worn_template(
-                truth["vertices_mm"], truth["faces"], truth["landmarks_mm"], condition, seed
-            )
-            yield image, affine, truth["cap"], template
+@dataclass(frozen=True, kw_only=True)
+class Task:
+    """One cap on one head under one condition; what a worker process takes."""
+
+    condition: str
+    head: str  # "s1", "ch2", "low2mm", "synthetic" or "points"
+    seed: int
 
 
-def synthetic_cases(condition: Condition, seeds: range) -> Iterator[Case]:
-    """Invented heads, one for each seed."""
-    for seed in seeds:
-        head = make_head(1000 + seed)
-        vertices, faces = head.surfaces["scalp"]
-        cap = make_cap(
-            vertices, faces, head.landmarks_mm, CAPS[condition.count], seed, **condition.cap
-        )
-        image, affine = make_scan(
-            head,
-            cap,
-            seed=seed,
-            voxel_mm=condition.voxel_mm,
-            axes=condition.axes,
-            oblique_deg=(condition.tilt_deg / np.sqrt(3),) * 3,
-            noise=0.03 + condition.noise,
-            chemical_shift_voxels=condition.shift_voxels,
-            read_axis=1,
-            brightness=condition.brightness,
-        )
-        template = worn_template(vertices, faces, head.landmarks_mm, condition, seed)
-        yield image, affine, cap, template
+def real_case(condition: Condition, which: str, seed: int) -> Case:
+    """Capsules painted on a real head."""
+    image, affine, truth = painted_head(
+        which,
+        CAPS[condition.count],
+        seed,
+        brightness=condition.brightness,
+        extra_noise=condition.noise,
+        shift_mm=(0.0, condition.shift_voxels, 0.0),
+        **condition.cap,
+    )
+    if which != "low2mm":
+        image, affine = regrid(image, affine, condition)
+    template = worn_template(
+        truth["vertices_mm"], truth["faces"], truth["landmarks_mm"], condition, seed
+    )
+    return image, affine, truth["cap"], template
 
 
-def run_images(condition: Condition, cases: Iterator[Case]) -> Tally:
-    """Skin, capsules and labels of every case."""
+def synthetic_case(condition: Condition, seed: int) -> Case:
+    """An invented head, one for each seed."""
+    head = make_head(1000 + seed)
+    vertices, faces = head.surfaces["scalp"]
+    cap = make_cap(vertices, faces, head.landmarks_mm, CAPS[condition.count], seed, **condition.cap)
+    image, affine = make_scan(
+        head,
+        cap,
+        seed=seed,
+        voxel_mm=condition.voxel_mm,
+        axes=condition.axes,
+        oblique_deg=(condition.tilt_deg / np.sqrt(3),) * 3,
+        noise=0.03 + condition.noise,
+        chemical_shift_voxels=condition.shift_voxels,
+        read_axis=1,
+        brightness=condition.brightness,
+    )
+    template = worn_template(vertices, faces, head.landmarks_mm, condition, seed)
+    return image, affine, cap, template
+
+
+def run_task(task: Task) -> Tally:
+    """Skin, capsules and labels of one cap (labels alone where there is no image)."""
     tally = Tally()
-    layout = standard_layout(CAPS[condition.count])
-    for image, affine, cap, template in cases:
-        begin = time.process_time()
-        try:
+    condition = CONDITIONS[task.condition]
+    names = CAPS[condition.count]
+    try:
+        if task.head == "points":
+            head = make_point_head(5000 + task.seed)
+            drawn = make_point_cap(head, names, task.seed, **condition.cap)
+            begin = time.process_time()
+            markers, cap = drawn.markers, drawn.cap
+            electrodes = label_markers(markers, head.skin, standard_layout(names))
+            template = worn_template(
+                head.vertices_mm, head.faces, head.landmarks_mm, condition, task.seed
+            )
+        else:
+            image, affine, cap, template = (
+                synthetic_case(condition, task.seed)
+                if task.head == "synthetic"
+                else real_case(condition, task.head, task.seed)
+            )
+            begin = time.process_time()
             volume = check_volume(image, affine)
             skin = find_skin(volume)
             markers = find_markers(volume, skin)
-            electrodes = label_markers(markers, skin, layout)
-        except LocatorError as error:
-            tally.refused += 1
-            print(f"    refused: {error}", flush=True)
-            continue
-        tally.seconds += time.process_time() - begin
-        tally.add(
-            electrodes,
-            markers,
-            cap,
-            template,
-            condition,
-        )
+            electrodes = label_markers(markers, skin, standard_layout(names))
+    except LocatorError as error:
+        tally.refused = 1
+        print(f"    {task.condition}, {task.head} {task.seed}: refused: {error}", flush=True)
+        return tally
+    tally.seconds = time.process_time() - begin
+    tally.add(electrodes, markers, cap, template, condition)
     return tally
 
 
-def run_points(condition: Condition, seeds: range) -> Tally:
-    """Labels alone, on invented heads without an image."""
-    tally = Tally()
-    names = CAPS[condition.count]
-    layout = standard_layout(names)
-    for seed in seeds:
-        head = make_point_head(5000 + seed)
-        drawn = make_point_cap(head, names, seed, **condition.cap)
-        begin = time.process_time()
-        try:
-            electrodes = label_markers(drawn.markers, head.skin, layout)
-        except LocatorError as error:
-            tally.refused += 1
-            print(f"    refused: {error}", flush=True)
-            continue
-        tally.seconds += time.process_time() - begin
-        tally.add(
-            electrodes,
-            drawn.markers,
-            drawn.cap,
-            worn_template(head.vertices_mm, head.faces, head.landmarks_mm, condition, seed),
-            condition,
-        )
-    return tally
+def gather(tallies: Iterable[Tally]) -> Tally:
+    """All caps of one row together."""
+    whole = Tally()
+    for one in tallies:
+        whole.labels.extend((whole.caps, confidence, right) for _, confidence, right in one.labels)
+        for name in COUNTED:
+            setattr(whole, name, getattr(whole, name) + getattr(one, name))
+        for name in LISTED:
+            getattr(whole, name).extend(getattr(one, name))
+    return whole
+
+
+COUNTED = (
+    "present",
+    "right",
+    "wrong",
+    "wrong_sure",
+    "right_sure",
+    "off",
+    "off_inferred",
+    "ceiling",
+    "caps",
+    "refused",
+    "seconds",
+)
+LISTED = ("center_mm", "in_ellipsoid", "inferred_ratio")
+
+
+def refusals(heads: tuple[str, ...], seeds: range) -> list[str]:
+    """Scans that must be refused: bare heads, and capsules without a head."""
+    lines = []
+    layout = standard_layout(CAPS[61])
+    for which in (*heads, *(["synthetic"] * len(seeds) if not heads else [])):
+        seed = seeds.start + len(lines)
+        bare = Condition(title="bare", count=61, cap={"n_off": 61})
+        case = synthetic_case if which == "synthetic" else None
+        image, affine, *_ = case(bare, seed) if case is not None else real_case(bare, which, seed)
+        lines.append(f"no capsules, {which} {seed}: {_refused(image, affine, layout)}")
+    rng = np.random.default_rng(seeds.start)
+    grid = np.stack(np.meshgrid(*(np.arange(160.0),) * 3, indexing="ij"), axis=-1)
+    alone = np.abs(rng.normal(0, 4, grid.shape[:3])).astype(np.float32)
+    way = rng.normal(size=(61, 3))
+    way[:, 2] = np.abs(way[:, 2])
+    for center in 80 + 75 * way / np.linalg.norm(way, axis=1, keepdims=True):
+        low = np.floor(center).astype(int) - 6
+        part = tuple(slice(max(start, 0), start + 13) for start in low)
+        away = ((grid[part] - center) ** 2).sum(axis=-1)
+        alone[part] += (200 * np.clip(4.5 - np.sqrt(away), 0, 1)).astype(np.float32)
+    lines.append(f"capsules without a head: {_refused(alone, np.eye(4), layout)}")
+    return lines
+
+
+def _refused(image: NDArray[np.float32], affine: Array, layout: Layout) -> str:
+    """The reason in the tool's own words, or that it went through."""
+    try:
+        volume = check_volume(image, affine)
+        skin = find_skin(volume)
+        label_markers(find_markers(volume, skin), skin, layout)
+    except LocatorError as error:
+        return f"refused: {error}"
+    return "WENT THROUGH"
 
 
 HEADER = (
@@ -445,6 +498,14 @@ def reliability(tallies: list[Tally], rng: np.random.Generator) -> str:
     return "\n".join(lines)
 
 
+def tasks_of(name: str, heads: str, seeds: range, real: tuple[str, ...]) -> list[Task]:
+    """The caps of one row."""
+    if heads != "real":
+        return [Task(condition=name, head=heads, seed=seed) for seed in seeds]
+    which = (*real, "low2mm") if name == "2mm" else real
+    return [Task(condition=name, head=one, seed=seed) for one in which for seed in seeds]
+
+
 def main(arguments: list[str] | None = None) -> int:
     """Print the table."""
     parser = argparse.ArgumentParser(description=__doc__.splitlines()[0])
@@ -455,31 +516,28 @@ def main(arguments: list[str] | None = None) -> int:
     )
     parser.add_argument("--conditions", nargs="*", choices=tuple(CONDITIONS), default=None)
     parser.add_argument("--quick", action="store_true", help="one seed, clean and hard, one head")
+    parser.add_argument("--jobs", type=int, default=1, help="processes at once (default 1)")
+    parser.add_argument("--refusals", action="store_true", help="only the scans to be refused")
     chosen = parser.parse_args(arguments)
     names = chosen.conditions or [name for name in CONDITIONS if name != "hopeless"]
     seeds = range(chosen.first_seed, chosen.first_seed + chosen.seeds)
-    real = ("s1", "ch2")
+    real: tuple[str, ...] = ("s1", "ch2")
     if chosen.quick:
-        names, seeds, real = (
-            ["clean", "hard"],
-            range(chosen.first_seed, chosen.first_seed + 1),
-            ("s1",),
-        )
+        names, seeds, real = ["clean", "hard"], range(seeds.start, seeds.start + 1), ("s1",)
     if chosen.heads == "points" and chosen.conditions is None and not chosen.quick:
         names = ["clean", "hard", "sparse", "128", "19", "far", "hopeless"]
+    if chosen.refusals:
+        print("\n".join(refusals(real if chosen.heads == "real" else (), seeds)))
+        return 0
     print(f"Electrodes, painted capsules ({chosen.heads} heads)")
     print(HEADER, flush=True)
     tallies = []
-    for name in names:
-        condition = CONDITIONS[name]
-        if chosen.heads == "points":
-            tally = run_points(condition, seeds)
-        elif chosen.heads == "synthetic":
-            tally = run_images(condition, synthetic_cases(condition, seeds))
-        else:
-            tally = run_images(condition, real_cases(condition, seeds, real))
-        tallies.append(tally)
-        print(row(condition, tally), flush=True)
+    with Pool(chosen.jobs) as pool:
+        for name in names:
+            tasks = tasks_of(name, chosen.heads, seeds, real)
+            tally = gather(pool.imap(run_task, tasks))
+            tallies.append(tally)
+            print(row(CONDITIONS[name], tally), flush=True)
     ratio = np.array([one for tally in tallies for one in tally.inferred_ratio])
     if len(ratio):
         print(

@@ -594,7 +594,9 @@ def _offset_map(
     weight = rays.clear.astype(np.float64)
     offset = np.zeros(first.shape, np.float32)
     near_face = ndimage.binary_dilation(face, iterations=3)
-    on_face = near_face[tuple(np.rint(rays.feet).astype(int).T)]
+    # Where the head runs out of the grid the closed surface lies half a voxel beyond it.
+    corner = np.clip(np.rint(rays.feet).astype(int), 0, np.array(first.shape) - 1)
+    on_face = near_face[tuple(corner.T)]
     for _ in range(2):
         # What stands out from 12 mm around is no skin, clear though its edge may be.
         offset = _spread(rays, weight, first.shape, voxel_mm, (6 * options.detail_mm,))

@@ -13,7 +13,7 @@ from locator.errors import MarkerError, SettingError
 from locator.markers import MarkerOptions, Markers, find_markers
 from locator.skin import find_skin
 from locator.volume import Volume, check_volume
-from tests.sphere_scan import Scene, affine, on_the_skin, scan, volume
+from tests.sphere_scan import CENTER_MM, Scene, affine, on_the_skin, scan, volume
 
 NOBODY = np.zeros((0, 3))
 
@@ -80,7 +80,7 @@ def test_covariance_matches_the_errors():
 
 
 def test_a_head_without_capsules_is_refused_with_the_reason():
-    with pytest.raises(MarkerError, match=r"Found \d+ blobs.*fat-suppressed"):
+    with pytest.raises(MarkerError, match=r"Found \d+ blobs.*not fat-suppressed"):
         found(volume(Scene(NOBODY), noise=0.02))
 
 
@@ -145,6 +145,68 @@ def test_same_input_same_markers():
     first, second = found(scan_), found(scan_)
     np.testing.assert_array_equal(first.centers_scanner_mm, second.centers_scanner_mm)
     np.testing.assert_array_equal(first.score, second.score)
+
+
+def test_a_bright_rim_beside_a_capsule_does_not_take_it_away():
+    truth = on_the_skin(24)
+    matrix, shape = affine()
+    image = scan(Scene(truth), matrix, shape, noise=0.02)
+    points = np.indices(shape).reshape(3, -1).T @ matrix[:3, :3].T + matrix[:3, 3] - CENTER_MM
+    radius = np.linalg.norm(points, axis=1)
+    # Walls as bright as fat, like the rim of an ear, 1.5 to 4 mm beside the first eight capsules.
+    for center in truth[:8] - CENTER_MM:
+        up = center / np.linalg.norm(center)
+        side = np.cross(up, [0.3, 0.9, 0.2])
+        side /= np.linalg.norm(side)
+        offset = points - center
+        wall = (np.abs(offset @ side - 6.75) < 1.25) & (np.abs(offset @ np.cross(up, side)) < 9)
+        wall &= (radius < 88) & (radius > 77) & (offset @ up > -8)
+        image.reshape(-1)[wall] = 500.0
+    markers = found(check_volume(image, matrix))
+    likely = markers.centers_scanner_mm[markers.score > 0.5]
+    away, _ = cKDTree(likely).query(truth[:8])
+    assert away.max() < 0.25
+
+
+def test_capsules_cut_by_the_field_are_found_and_told():
+    truth = on_the_skin(24)
+    matrix, shape = affine()
+    image = scan(Scene(truth), matrix, shape, noise=0.02)
+    top = int(np.floor((truth[:, 2].max() + 1.0 - matrix[2, 3]) / matrix[2, 2]))
+    markers = found(check_volume(np.ascontiguousarray(image[:, :, : top + 1]), matrix))
+    away, nearest = cKDTree(markers.centers_scanner_mm).query(truth)
+    first = int(np.argmax(truth[:, 2]))
+    assert away[first] < 0.5
+    assert markers.score[nearest[first]] > 0.5
+    assert markers.cut_off[nearest[first]]
+    assert not markers.cut_off[nearest[truth[:, 2] < truth[first, 2] - 6]].any()
+    spread = np.trace(markers.covariance_mm2, axis1=1, axis2=2)
+    assert spread[nearest[first]] > 4 * np.median(spread[nearest])
+    assert any("edge of the field" in f.problem for f in markers.findings)
+
+
+DIM_FAT = ((0.0, 0.25), (2.0, 0.42), (6.0, 0.06), (12.0, 0.35), (16.0, 0.4))
+
+
+def test_bright_markers_on_suppressed_fat_are_found():
+    truth = on_the_skin(24)
+    markers = found(volume(Scene(truth, layers=DIM_FAT, brightness=1.6), noise=0.02))
+    check_all_found(markers, truth, 0.2)
+    assert any("suppression" in f.problem for f in markers.findings)
+
+
+def test_fat_no_brighter_than_the_brain_is_named_as_suppressed():
+    with pytest.raises(MarkerError, match="fat suppression, which takes oil"):
+        found(volume(Scene(NOBODY, layers=DIM_FAT), noise=0.02))
+
+
+def test_flat_capsules_keep_their_centre_and_half_height():
+    truth = on_the_skin(24, gap_mm=1.0, half_mm=1.75)
+    scan_ = volume(Scene(truth, radii_mm=(5.0, 1.75)), noise=0.01, voxel_mm=(1.0, 1.0, 1.0))
+    markers = found(scan_)
+    check_all_found(markers, truth, 0.03)
+    likely = markers.score > 0.5
+    assert np.median(markers.half_height_mm[likely]) == pytest.approx(1.75, abs=0.2)
 
 
 @pytest.mark.parametrize(

@@ -96,6 +96,16 @@ def test_a_head_cut_by_the_field_of_view_is_found_where_it_is_seen():
     assert np.abs(height_mm(skin, on_sphere(0))[seen]).max() < 0.9
 
 
+def test_a_head_cut_at_the_far_ends_of_the_array_is_no_trouble():
+    matrix, shape = affine()
+    image = scan(Scene(NOBODY), matrix, shape, noise=0.02)
+    for stop in range(108, 113):
+        cut = np.ascontiguousarray(image[:stop, : stop + 1])
+        height = height_mm(find_skin(check_volume(cut, matrix)), on_sphere(0))
+        inside = (matrix[:2, 3] + matrix[0, 0] * (stop - 8) > on_sphere(0)[:, :2]).all(axis=1)
+        assert np.abs(height[inside]).max() < 0.9
+
+
 def test_zeroed_background_is_no_trouble():
     matrix, shape = affine()
     image = scan(Scene(NOBODY), matrix, shape, noise=0.02)

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import logging
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 from numpy.typing import NDArray
@@ -26,8 +26,14 @@ FloatArray = NDArray[np.float64]
 
 logger = logging.getLogger(__name__)
 
-FIT_FACTOR, EVEN_SHARE, MISFIT_SHARE, NEAR_SKIN_SHARE = 1.5, 0.003, 0.1, 0.03
-"""Of the fit's covariance; and of a voxel: everywhere, times the misfit, and beside the skin."""
+SAMPLING_SHARE, MISFIT_SHARE, NEAR_SKIN_SHARE, HIDDEN_SHARE = 0.017, 0.03, 0.01, 0.1
+"""Terms of the centres' doubt, see `_covariance`. From capsules painted on real and invented heads:
+the first from 2 mm and 1 x 1 x 2.5 mm voxels, the others small beside the fit's own share."""
+
+SUPPRESSED_BELOW, FAT_OVER_BRAIN = 1.3, 2.2
+"""Fat over brain: under the first the fat is suppressed; the second is usual without that. Fat is
+1.8 to 2.9 times white matter on T1 scans and 2.2 to 3.7 times the median of the brain (measured on
+two real and three invented heads; 1.0 with four fifths of the fat's signal suppressed)."""
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
@@ -91,6 +97,10 @@ class Markers(Frozen):
     shift_mm : (3,) ndarray
         Chemical shift that was removed from every centre, scanner mm; zeros when none is known.
     findings : tuple of Finding
+    half_height_mm : (M,) ndarray
+        How far each blob reaches from its centre towards the skin, mm.
+    cut_off : (M,) ndarray of bool
+        Whether the edge of the field of view cuts the blob.
     """
 
     centers_scanner_mm: FloatArray
@@ -103,6 +113,8 @@ class Markers(Frozen):
     capsule_mm: float
     shift_mm: FloatArray
     findings: tuple[Finding, ...] = ()
+    half_height_mm: FloatArray = field(default_factory=lambda: np.zeros(0))
+    cut_off: NDArray[np.bool_] = field(default_factory=lambda: np.zeros(0, dtype=bool))
 
 
 def find_markers(
@@ -148,7 +160,7 @@ def find_markers(
         image,
         skin,
         floor=floor,
-        least=0.5 * options.least_contrast * skin.fat_intensity,
+        least=0.5 * options.least_contrast * fat.usual,
         diameters_mm=diameters,
         shell_mm=options.shell_mm,
         at_most=400,
@@ -200,18 +212,24 @@ class _Fat:
         self.over_brain = common / max(brain, 1e-30)
 
     @property
+    def usual(self) -> float:
+        """Level of fat that is not suppressed."""
+        return FAT_OVER_BRAIN * self._brain if self.suppressed else self._common
+
+    @property
     def suppressed(self) -> bool:
-        """Whether the scalp is darker than the brain: on T1, fat is 2 times white matter."""
-        return self.over_brain < 0.8
+        """Whether the scalp is no brighter than the brain."""
+        return self.over_brain < SUPPRESSED_BELOW
 
     def at(self, points: FloatArray) -> FloatArray:
         """Level at points (N, 3), image units."""
+        if self.suppressed:
+            # The brain has to do for a measure: what fat would be beside it.
+            return np.full(len(points), FAT_OVER_BRAIN * self._brain)
         count = min(150, len(self._values))
         _, index = self._tree.query(points, k=count)
         level = np.percentile(self._values[index.reshape(len(points), -1)], 70, axis=1)
-        # Where fat is suppressed the brain has to do for a measure.
-        least = self._brain if self.suppressed else 0.4 * self._common
-        local: FloatArray = np.clip(level, least, max(2.5 * self._common, least))
+        local: FloatArray = np.clip(level, 0.4 * self._common, 2.5 * self._common)
         return local
 
 
@@ -324,23 +342,75 @@ class _Evidence:
 
 
 def _covariance(
-    volume: Volume, fits: list[BlobFit], seen: _Evidence, normals: FloatArray
+    volume: Volume,
+    fits: list[BlobFit],
+    seen: _Evidence,
+    normals: FloatArray,
+    hidden_mm: FloatArray,
 ) -> FloatArray:
-    """Covariance of the centres: what the fit says, and what its model leaves out, mm^2."""
-    # From painted capsules on two real and four invented heads, eleven conditions of noise, size,
-    # gap, shape and voxel: raised until 95 to 99 % of true centres lie within the 95 % ellipsoid.
-    voxel = float(np.mean(volume.voxel_mm))
-    fitted = FIT_FACTOR * np.array([fit.covariance_mm2 for fit in fits])
-    even = (voxel * (EVEN_SHARE + MISFIT_SHARE * seen.misfit)) ** 2
-    # The edge of the skin draws a blob that comes within 2 mm of it.
+    """Covariance of the centres, mm^2.
+
+    The sum of
+
+    * the fit's own: curvature of the sum of squares and the scatter of the residuals, noise and
+      model misfit alike, but without what is the same on opposite sides (`Fitter`);
+    * sampling: the blur of a voxel is taken for a Gaussian, which is wrong by a share that falls
+      with the number of voxels across, so by ``SAMPLING_SHARE`` times the square of the voxel
+      size over the diameter, along each axis of the grid;
+    * misfit: what the residuals tell of a wrong model, ``MISFIT_SHARE`` of a voxel times the
+      residual over the brightness, all ways;
+    * the skin: its edge draws a blob that comes within 2 mm of it, along the normal;
+    * the edge of the field: ``HIDDEN_SHARE`` of what it hides, along that axis.
+
+    The doubt of the chemical shift comes on top where it is taken off.
+    """
+    voxel = np.asarray(volume.voxel_mm)
+    axes = np.asarray(volume.scanner_from_voxel)[:3, :3] / voxel
+    fitted = np.array([fit.covariance_mm2 for fit in fits])
+    sampling = (SAMPLING_SHARE * voxel**2 / seen.diameter_mm[:, None]) ** 2
+    grid = sampling + (HIDDEN_SHARE * hidden_mm) ** 2
+    misfit = (float(voxel.mean()) * MISFIT_SHARE * seen.misfit) ** 2
     lowest = seen.height_mm - np.array([fit.radii_mm[0] for fit in fits])
-    upright = (voxel * NEAR_SKIN_SHARE * np.clip(1 - lowest / 2, 0, 1)) ** 2
+    upright = (float(voxel.mean()) * NEAR_SKIN_SHARE * np.clip(1 - lowest / 2, 0, 1)) ** 2
     total: FloatArray = (
         fitted
-        + even[:, None, None] * np.eye(3)
+        + np.einsum("ia,na,ja->nij", axes, grid, axes)
+        + misfit[:, None, None] * np.eye(3)
         + upright[:, None, None] * normals[:, :, None] * normals[:, None, :]
     )
     return total
+
+
+def _hidden(volume: Volume, fits: list[BlobFit], common_mm: float) -> FloatArray:
+    """How far each blob reaches beyond the field of view along each axis of the grid, mm.
+
+    What is cut looks smaller than it is: every blob is taken to reach as far as four fifths of
+    the common radius at least.
+    """
+    inverse = np.linalg.inv(volume.scanner_from_voxel)
+    index = apply_affine(inverse, np.array([fit.center_mm for fit in fits]))
+    reach = np.array(
+        [
+            np.linalg.norm(np.linalg.solve(fit.inverse_shape.T, inverse[:3, :3].T), axis=0)
+            for fit in fits
+        ]
+    )
+    reach = np.maximum(reach, 0.4 * common_mm / np.asarray(volume.voxel_mm))
+    # Half a voxel beyond its centre a voxel ends.
+    below = reach - (index + 0.5)
+    above = reach - (np.array(volume.intensity.shape) - 0.5 - index)
+    hidden: FloatArray = np.maximum(np.maximum(below, above), 0) * np.asarray(volume.voxel_mm)
+    return hidden
+
+
+def _half_height(fits: list[BlobFit], normals: FloatArray) -> FloatArray:
+    """How far each ellipsoid reaches along the normal of the skin, mm."""
+    return np.array(
+        [
+            np.linalg.norm(np.linalg.solve(fit.inverse_shape.T, normal))
+            for fit, normal in zip(fits, normals, strict=True)
+        ]
+    )
 
 
 def _above(value: FloatArray, limit: float, width: float) -> FloatArray:
@@ -363,7 +433,9 @@ def _ranked(
         raise MarkerError(_nothing(likely, fat, options))
     normals = skin_normals(skin, centers)
     shift = estimate_shift(volume, normals, seen.height_mm, score)
-    covariance = _covariance(volume, fits, seen, normals) + shift.covariance_mm2
+    hidden = _hidden(volume, fits, float(np.exp(mean[1])))
+    covariance = _covariance(volume, fits, seen, normals, hidden) + shift.covariance_mm2
+    cut_off = hidden.max(axis=1) > 0
     centers = centers - shift.shift_mm
     order = np.lexsort((*centers.T, -score))[: max(30, 3 * likely)]
     capsule = options.capsule_mm if options.capsule_mm is not None else float(np.exp(mean[1]))
@@ -378,8 +450,39 @@ def _ranked(
         score=score[order],
         capsule_mm=capsule,
         shift_mm=shift.shift_mm,
-        findings=shift.findings,
+        findings=(*shift.findings, *_remarks(cut_off & (score > 0.5), fat)),
+        half_height_mm=_half_height(fits, normals)[order],
+        cut_off=cut_off[order],
     )
+
+
+def _remarks(cut_off: NDArray[np.bool_], fat: _Fat) -> list[Finding]:
+    """What a person should know of this scan's capsules."""
+    remarks = []
+    if cut_off.any():
+        remarks.append(
+            Finding(
+                level="look",
+                stage="markers",
+                problem=f"{int(cut_off.sum())} of the capsules are cut by the edge of the field of"
+                " view; their centres are less sure.",
+                suggestion="Look at them in the slices; leave more room round the cap next time.",
+                doubt=0.5,
+            )
+        )
+    if fat.suppressed:
+        remarks.append(
+            Finding(
+                level="note",
+                stage="markers",
+                problem=f"The scalp's fat is at only {fat.over_brain:.2f} of the brain's"
+                " brightness (fat suppression), yet the markers are bright: they hold water, or"
+                " oil that escaped the suppression.",
+                suggestion="",
+                doubt=0.2,
+            )
+        )
+    return remarks
 
 
 def _nothing(likely: int, fat: _Fat, options: MarkerOptions) -> str:
@@ -390,10 +493,11 @@ def _nothing(likely: int, fat: _Fat, options: MarkerOptions) -> str:
     if fat.suppressed:
         return msg + (
             f" The scalp's fat is at only {fat.over_brain:.2f} of the brain's brightness, on a T1"
-            " it is brighter: fat suppression, which takes the oil capsules away too. Use a T1"
+            " it is at 2 and more: fat suppression, which takes oil capsules away too. Use a T1"
             " without fat suppression."
         )
     return msg + (
-        " Check that the cap's capsules are in the image and bright (a fat-suppressed scan does"
-        " not show oil), or give their size with --capsule-mm."
+        f" The scalp's fat is at {fat.over_brain:.1f} of the brain's brightness, so the scan is"
+        " not fat-suppressed: capsules of oil would be seen. Check that a cap with capsules was"
+        " worn in this scan; if it was, give their size with --capsule-mm."
     )

@@ -23,6 +23,11 @@ DIAMETER_PER_SIGMA = 2 * 3**0.5
 setting the derivative of its scale-normalised response to zero in three dimensions."""
 
 
+EDGE_ROOM = 8
+"""Voxels of air beyond an edge of the field: more than half of the widest capsule. Even, so that
+halving the grid does not move it."""
+
+
 @dataclass(frozen=True, eq=False, slots=True)
 class Blobs:
     """Local maxima of the scale-normalised response.
@@ -89,6 +94,16 @@ def find_blobs(
     height = skin.height_map_mm
     voxel_mm = voxel_sizes_mm(skin.scanner_from_grid)
     over = air_only(image, height, floor)
+    # Where the field of view ends near the skin, a capsule may be cut in two: what is seen of it
+    # is a blob of its own only with air beyond.
+    room = [
+        tuple(EDGE_ROOM if height.take(end, axis).min() < shell_mm[1] else 0 for end in (0, -1))
+        for axis in range(3)
+    ]
+    corner = np.array([first for first, _ in room], dtype=np.float64)
+    if corner.any() or any(last for _, last in room):
+        over = np.pad(over, room, mode="constant")
+        height = np.pad(height, room, mode="edge")
     low, high = (d / DIAMETER_PER_SIGMA for d in diameters_mm)
     count = max(2, round(np.log(high / low) / np.log(SCALE_STEP)) + 1)
     # A difference of Gaussians at s and k s stands for the Laplacian at about s sqrt(k).
@@ -112,7 +127,7 @@ def find_blobs(
             responses.append(strength / _ball_answer(SCALE_STEP))
             diameters.append(np.full(len(found), scale * DIAMETER_PER_SIGMA))
         pending = smooth
-    place, diameter = np.concatenate(places), np.concatenate(diameters)
+    place, diameter = np.concatenate(places) - corner, np.concatenate(diameters)
     response = np.concatenate(responses)
     keep = _strongest(place * voxel_mm, diameter, response, at_most)
     return Blobs(place[keep], diameter[keep], response[keep])

@@ -31,6 +31,9 @@ RIM_MM = 2.5
 """Beyond this distance from a blob's own surface other things begin: an ear, a neighbour, hair. The
 plastic round the oil, 1 mm, and the blur of the voxels lie within it."""
 
+RINGS_MM = np.array([-1.0, 0.0, 1.0])
+"""Distances from a blob's surface at which its residuals are compared side by side."""
+
 FIRST_VOXELS, FIRST_STEPS = 700, 6
 """Enough of a window, and of steps, to see whether there is a blob and of what size."""
 
@@ -188,7 +191,19 @@ class Fitter:
         found = self._descend(window, np.zeros(3), shape, diameter_mm, 12)
         if found is None:
             return None
-        center, shape, state = found
+        center, begun, (_, shape, state) = found[0], shape, found
+        strayed = np.linalg.svd(shape @ np.linalg.inv(begun), compute_uv=False)
+        if np.abs(np.log(strayed)).max() > 0.1:
+            # Another shape than was expected: its own rim is looked at.
+            middle = center_mm + center
+            wider = self._window(middle, shape, normal, rim, MOST_VOXELS)
+            if wider is None:
+                return None
+            found = self._descend(wider, np.zeros(3), shape, diameter_mm, 8)
+            if found is None:
+                return None
+            window, center_mm = wider, middle
+            center, shape, state = found
         scatter = 1.4826 * float(np.median(np.abs(state.residual)))
         width = 3 * max(scatter, self._noise(window), self.settings.model_error * state.linear[0])
         calm = window.weight / (1 + (state.residual / width) ** 2)
@@ -397,9 +412,10 @@ class Fitter:
             return None
         noise = self._noise(window)
         radii = 1 / np.linalg.svd(inverse_shape, compute_uv=False)
-        left = float(window.weight @ state.residual**2)
-        variance = max(left / max(window.weight.sum() - 12, 1.0), noise**2)
+        # The noise of the air may be more than that of this place: it is only a floor.
         jacobian = np.concatenate([amplitude * state.slope, state.columns], axis=1)
+        uneven = _uneven(window, center, inverse_shape, state.residual, jacobian)
+        variance = max(uneven, (0.3 * noise) ** 2)
         normal = (jacobian * window.weight[:, None]).T @ jacobian / variance
         prior, _ = self._prior(state.log_radii, len(normal))
         normal += prior
@@ -435,6 +451,42 @@ _COMMON = np.zeros((6, 6))
 _COMMON[:3, :3] = 1 / 9
 _CENTRED = np.diag([1.0, 1, 1, 2, 2, 2])
 _CENTRED[:3, :3] -= 1 / 3
+
+
+def _uneven(
+    window: _Window,
+    center: FloatArray,
+    inverse_shape: FloatArray,
+    residual: FloatArray,
+    jacobian: FloatArray,
+) -> float:
+    """Variance of the residuals where they move the centre.
+
+    A shell that is too sharp or a disc where an ellipsoid was expected leaves residuals that are
+    the same on both sides of the centre and do not move it: these are taken out. The rest is
+    averaged over the blob's edge, which places it: the noise of a magnitude image is larger there
+    than in the air around. What a fit takes from each residual is given back by its leverage
+    (MacKinnon & White 1985, J Econom 29:305).
+    """
+    y = (window.points - center) @ inverse_shape.T
+    along = y / np.sqrt(np.einsum("ij,ij->i", y, y) + 1e-6)[:, None]
+    i, j = np.triu_indices(3)
+    sides = along[:, i] * along[:, j]
+    beyond = _from_surface(window.points - center, inverse_shape)
+    rings = np.clip(1 - np.abs(beyond[:, None] - RINGS_MM), 0, 1)
+    even = (rings[:, :, None] * sides[:, None, :]).reshape(len(y), -1)
+    # Slopes on the scale of the other columns, so that one ridge does for all.
+    scale = np.maximum(np.abs(jacobian).max(axis=0), 1e-12)
+    root = np.sqrt(window.weight)[:, None]
+    columns, left = np.concatenate([jacobian / scale, even], axis=1) * root, residual * root[:, 0]
+    equal = columns.T @ columns
+    equal[np.diag_indices_from(equal)] += 1e-3
+    half = np.linalg.solve(equal, columns.T)
+    left = left - columns @ (half @ left)
+    leverage = np.einsum("ij,ji->i", columns, half)
+    edge = (jacobian[:, :3] ** 2).sum(axis=1)
+    square = left**2 / np.clip(1 - leverage, 0.2, 1)
+    return float(edge @ square) / max(float(edge @ window.weight), 1e-30)
 
 
 def _from_surface(offset: FloatArray, inverse_shape: FloatArray) -> FloatArray:

@@ -337,7 +337,8 @@ def _electrodes(
         )
         raise LabelError(msg)
     confidence = stated_confidence(
-        np.where(seen, search.share[np.arange(n_names), np.maximum(chosen, 0)], search.absent)
+        np.where(seen, search.share[np.arange(n_names), np.maximum(chosen, 0)], search.absent),
+        best.jitter_mm,
     )
 
     confidence = confidence * (1.0 - mirrored_probability(search))
@@ -351,8 +352,9 @@ def _electrodes(
     residual[~seen] = np.nan
 
     worn = marker[seen]
-    radius = 0.5 * float(markers.capsule_mm)
-    measured = float(np.median(heights[worn])) - radius
+    half = np.asarray(markers.half_height_mm)
+    half = half if len(half) else np.full(len(heights), 0.5 * float(markers.capsule_mm))
+    measured = float(np.median(heights[worn] - half[worn]))
     holder = float(options.holder_mm) if options.holder_mm is not None else max(measured, 0.0)
     height_sd = max(
         float(1.4826 * np.median(np.abs(heights[worn] - np.median(heights[worn])))), 0.2

@@ -94,6 +94,7 @@ def name_spacing_mm(places: FloatArray) -> float:
     return float(np.median(gaps.min(axis=1)))
 
 
+LOOSE_JITTER_MM = 5.5
 _EVEN_ODDS = float(np.log(0.5))
 
 
@@ -155,6 +156,11 @@ def search_cap(
     for start in coarse_starts(model, evidence, n_best=n_best):
         add_fit(fits, fit_cap(model, evidence, start))
     best = max(fits, key=lambda fit: fit.log_evidence)
+    if best.jitter_mm > LOOSE_JITTER_MM:
+        # A loose cap can be put on in many ways: follow many more starts.
+        for start in coarse_starts(model, evidence, n_best=40)[n_best:]:
+            add_fit(fits, fit_cap(model, evidence, start))
+        best = max(fits, key=lambda fit: fit.log_evidence)
     if look_again is not None:
         evidence = replace(evidence, log_ratio=look_again(best.share.sum(axis=0)))
     evidence = refine(best, evidence)
@@ -165,7 +171,7 @@ def search_cap(
     fits.sort(key=lambda fit: -fit.log_evidence)
     evidence = refine(fits[0], evidence)
     again: list[Fit] = []
-    for fit in fits[:8]:
+    for fit in fits[: (8 if fits[0].jitter_mm < LOOSE_JITTER_MM else 30)]:
         add_fit(
             again,
             fit_cap(

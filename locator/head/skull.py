@@ -26,6 +26,11 @@ THINNEST_MM = 2.0
 """Thinnest bone that is looked for (temporal squama; value from memory)."""
 
 
+SOFT_LEVEL = 0.8
+"""Muscle and galea on a T1 image, in units of grey matter (0.5 to 0.7 of white matter in figures of
+relaxation times; common practice, no source)."""
+
+
 @dataclass(frozen=True, kw_only=True, slots=True)
 class SkullRadii:
     """Radii along the rays, mm, and how well each is known."""
@@ -189,6 +194,73 @@ def _inner_cost(
     return result
 
 
+def _half_way(profile: FloatArray, before: float, outer: FloatArray, ring: IntArray) -> FloatArray:
+    """The outer table's edge half-way between dark and the first layer outside it, mm.
+
+    That layer is the galea or a muscle, about `SOFT_LEVEL` of grey matter and often thinner than a
+    voxel, before the bright fat: half-way up to the fat lies 0.6 mm too far out. Where dark and bright cannot be told apart the place is kept; single rays follow the median of
+    their neighbours.
+    """
+    row = np.arange(len(profile))
+    fine = np.arange(-3.0, 3.01, 0.1)
+    at = (outer[:, None] + fine + before) / STEP_MM
+    low = np.clip(np.floor(at).astype(int), 0, profile.shape[1] - 2)
+    part = np.clip(at - low, 0.0, 1.0)
+    values = profile[row[:, None], low] * (1 - part) + profile[row[:, None], low + 1] * part
+    inside, outside = fine <= 0.5, fine >= 0.0
+    darkest = values[:, inside].argmin(axis=1)
+    dark = values[row, darkest]
+    bright = values[:, outside].max(axis=1)
+    half = 0.5 * (dark + np.minimum(bright, SOFT_LEVEL))
+    above = (values > half[:, None]) & (np.arange(len(fine))[None, :] > darkest[:, None])
+    edge = fine[above.argmax(axis=1)]
+    clear = above.any(axis=1) & (bright - dark > 0.4)
+    moved = np.where(clear, edge, 0.0)
+    around = np.median(np.concatenate([moved[:, None], moved[ring]], axis=1), axis=1)
+    # Of the two the more careful: a lone jump is an artefact of the ray.
+    moved = np.where(np.abs(moved - around) > 0.7, around, moved)
+    result: FloatArray = outer + moved
+    return result
+
+
+def table_beyond(profile: FloatArray, first: NDArray[np.intp], last: FloatArray) -> FloatArray:
+    """How clearly a dark table lies between two bright layers beyond each candidate place.
+
+    Marrow is as bright as scalp fat, so its inner edge looks like the outside of the skull; what
+    gives it away is the outer table beyond it, a dark line that a millimetre's voxel only half
+    resolves.
+
+    Parameters
+    ----------
+    profile : (V, N) ndarray
+        Intensity along the rays, in units of grey matter.
+    first : (P,) ndarray of int
+        First sample beyond each candidate place.
+    last : (V,) ndarray
+        Sample of each ray at which the scalp ends.
+
+    Returns
+    -------
+    (V, P) ndarray
+        From 0 (nothing) to 1 (a clear table).
+    """
+    n_samples = profile.shape[1]
+    sample = np.arange(n_samples)
+    scalp = np.where(sample[None, :] <= last[:, None], profile, 0.0)
+    after = np.maximum.accumulate(scalp[:, ::-1], axis=1)[:, ::-1]
+    # Bone is far darker than muscle (0.7 of grey matter) even where fat bleeds into it.
+    dark = np.clip((0.8 - scalp) / 0.4, 0.0, 1.0) * (sample[None, :] <= last[:, None])
+    clear = np.zeros((len(profile), len(first)))
+    for column, start in enumerate(first):
+        if start >= n_samples:
+            continue
+        so_far = np.maximum.accumulate(scalp[:, start:], axis=1)
+        walls = np.minimum(so_far, after[:, start:])
+        valley = np.clip(walls - scalp[:, start:] - 0.5, 0.0, 1.0) * dark[:, start:]
+        clear[:, column] = valley.max(axis=1)
+    return clear
+
+
 def find_skull(
     grid: WorkGrid,
     profile_image: NDArray[np.float32],
@@ -260,7 +332,8 @@ def find_skull(
     bone_sum = np.concatenate([np.zeros((len(rays), 1)), np.cumsum(bone_like, axis=1)], axis=1)
     first = np.clip(np.rint((place + 0.5 + before) / STEP_MM).astype(int), 0, profile.shape[1])
     left_over = (bone_sum[:, [-1]] - bone_sum[:, first]) * STEP_MM
-    cost = -6.0 * edge + 3.0 * dark + 2.0 * np.minimum(left_over, 4.0)
+    farther = table_beyond(profile, first, np.clip(gap - 2.0 + before, 0.0, None) / STEP_MM)
+    cost = -6.0 * edge + 3.0 * dark + 2.0 * np.minimum(left_over, 4.0) + 6.0 * farther
     expected = options.csf_mm + options.skull_mm
     cost = cost + 0.5 * ((place - expected) / 5.0) ** 2
     cost[~vault] = 0.5 * ((place - expected) / 2.0) ** 2
@@ -268,6 +341,7 @@ def find_skull(
     cost = cost + np.where(room < 2.0, 20.0 * (2.0 - room), 0.0)
     label, outer_sd = _choose(cost, ring, weight=0.25, most_mm=4.0)
     outer = np.interp(label, np.arange(len(place)), place)
+    outer = np.where(vault, _half_way(profile, before, outer, ring), outer)
     # Inner table.
     depth = np.arange(0.5, 14.0, STEP_MM)
     thickness = outer[:, None] - depth[None, :]

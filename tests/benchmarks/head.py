@@ -1,6 +1,6 @@
 """Figures of the head stage: real heads against what is known of them, invented heads exactly.
 
-Run with ``python tests/benchmarks/head.py [real] [invented] [perturbed]``. Real heads come from the
+Run with ``python -m tests.benchmarks.head [real] [invented] [perturbed]``. Real heads come from the
 package registries (see ``tests/real_heads.py``).
 """
 

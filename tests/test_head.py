@@ -25,6 +25,7 @@ from locator.head import (
 from locator.head.morphology import close, distance_to, largest_piece
 from locator.head.parts import label_parts
 from locator.head.shape import cover, distance_to_mesh, face_weights, fill_mesh, ring_neighbours
+from locator.head.skull import _half_way, table_beyond
 from locator.skin import Skin, find_skin
 from locator.volume import Volume, check_volume
 from tests import real_heads
@@ -331,6 +332,44 @@ def test_point_to_mesh_distance_of_a_sphere():
     found = distance_to_mesh(points, rays * 10, faces, 8.0)
     # The faces lie up to 0.03 mm inside the sphere of 10 mm; 40 is beyond the limit.
     assert found == pytest.approx([3.0, 3.0, 8.0], abs=0.04)
+
+
+def _skull_profile(table: float) -> np.ndarray:
+    """Brain, fluid, inner table, marrow, outer table, galea, fat, air every half millimetre."""
+    layers = (
+        (1.0, 8),  # 4 mm of brain before the hull
+        (0.2, 4),
+        (0.1, 4),
+        (2.2, 5),
+        (table, 2),
+        (0.8, 2),
+        (3.3, 8),
+        (0.05, 43),
+    )
+    return np.concatenate([np.full(count, level) for level, count in layers])
+
+
+@pytest.mark.parametrize("table", [0.1, 0.35, 0.5])
+def test_marrow_is_not_taken_for_scalp(table):
+    profile = np.tile(_skull_profile(table), (3, 1))
+    marrow, galea = 16, 23  # first sample beyond the inner table, beyond the outer one
+    clear = table_beyond(profile, np.array([marrow, galea]), np.full(3, 32.0))
+    assert clear[:, 0].min() > 0.7
+    assert clear[:, 1].max() == 0.0
+    # Without an outer table beyond it, the bright layer is the scalp.
+    plain = np.tile(np.where(np.arange(76) == 21, 2.2, _skull_profile(2.2)), (3, 1))
+    plain[:, 23:25] = 2.2
+    assert table_beyond(plain, np.array([marrow]), np.full(3, 32.0)).max() == 0.0
+
+
+@pytest.mark.parametrize("start", [-1.0, 0.0, 0.8])
+def test_the_outer_table_ends_where_the_first_soft_layer_begins(start):
+    rays, faces = icosphere(1)
+    ring = ring_neighbours(faces, len(rays))
+    profile = np.tile(_skull_profile(0.1), (len(rays), 1))
+    edge = 0.5 * 22.5 - 4.0  # between sample 22 (table) and 23 (galea), from the hull
+    found = _half_way(profile, 4.0, np.full(len(rays), edge + start), ring)
+    np.testing.assert_allclose(found, edge, atol=0.15)
 
 
 def test_ring_neighbours_are_neighbours_in_order():

@@ -207,8 +207,9 @@ def _half_way(profile: FloatArray, before: float, outer: FloatArray, ring: IntAr
     low = np.clip(np.floor(at).astype(int), 0, profile.shape[1] - 2)
     part = np.clip(at - low, 0.0, 1.0)
     values = profile[row[:, None], low] * (1 - part) + profile[row[:, None], low + 1] * part
-    inside, outside = fine <= 0.5, fine >= 0.0
-    darkest = values[:, inside].argmin(axis=1)
+    # The table itself, not the inner one beyond thin marrow.
+    inside, outside = np.flatnonzero((fine >= -2.0) & (fine <= 0.8)), fine >= 0.0
+    darkest = inside[-1] - values[:, inside[::-1]].argmin(axis=1)
     dark = values[row, darkest]
     bright = values[:, outside].max(axis=1)
     half = 0.5 * (dark + np.minimum(bright, SOFT_LEVEL))

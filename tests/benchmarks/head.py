@@ -13,15 +13,20 @@ import time
 import nibabel as nib
 import numpy as np
 from scipy import ndimage
+from scipy.spatial.transform import Rotation
 
+from locator.errors import LocatorError
 from locator.geometry import apply_affine, mesh_volume_mm3
 from locator.head import BRAIN_STEM, CEREBELLUM, GREY, WHITE, Head, build_head
 from locator.head.morphology import close, distance_to
 from locator.head.shape import distance_to_mesh, fill_mesh
+from locator.markers import find_markers
 from locator.skin import find_skin
 from locator.sources import make_sources
 from locator.volume import Volume, check_volume
 from tests import real_heads
+from tests.benchmarks.electrodes import Condition, regrid
+from tests.painted import NAMES_61, painted_head
 
 SURFACES = ("inner_skull", "outer_skull", "scalp")
 VAULT = 0.15
@@ -160,7 +165,7 @@ def ch2_figures() -> None:
         )
 
 
-def invented_figures(seeds=range(1, 6)) -> None:
+def invented_figures(seeds=range(1, 11)) -> None:
     """Invented heads and the layered ball against their exact surfaces."""
     from synthetic_heads import heads
     from synthetic_heads.scan import make_scan
@@ -189,33 +194,85 @@ def invented_figures(seeds=range(1, 6)) -> None:
         )
 
 
+def disturbed(volume: Volume, reference: Head, which: str):
+    """Yield a name, the disturbed volume, and the matrix that brings its world back."""
+    image = np.asarray(volume.intensity)
+    affine = np.asarray(volume.scanner_from_voxel)
+    still = np.eye(4)
+    white = float(np.median(image[np.asarray(reference.tissues) == WHITE]))
+    ramp = np.linspace(-1, 1, image.shape[1])[None, :, None]
+    rng = np.random.default_rng(0)
+    yield "13 times brighter", check_volume(image * 13, affine), still
+    for noise in (3, 6, 9):
+        size = noise / 100 * white
+        noisy = np.hypot(image + rng.normal(0, size, image.shape), rng.normal(0, size, image.shape))
+        yield f"noise {noise} %", check_volume(noisy.astype(np.float32), affine), still
+    for bias in (20, 45):
+        shaded = (image * (1 + bias / 100 * ramp)).astype(np.float32)
+        yield f"bias {bias} %", check_volume(shaded, affine), still
+    for pitch in (-20, 20):
+        turn = np.eye(4)
+        turn[:3, :3] = Rotation.from_euler("x", pitch, degrees=True).as_matrix()
+        turn[:3, 3] = reference.center_scanner_mm - turn[:3, :3] @ reference.center_scanner_mm
+        # The head is turned within the grid, not the grid with the head.
+        take = np.linalg.inv(affine) @ np.linalg.inv(turn) @ affine
+        pitched = ndimage.affine_transform(image, take[:3, :3], take[:3, 3], order=3)
+        pitched = np.maximum(pitched, 0.0).astype(np.float32)
+        yield f"pitch {pitch:+d} degrees", check_volume(pitched, affine), np.linalg.inv(turn)
+    grid = np.moveaxis(np.indices(image.shape, dtype=np.float32), 0, -1)
+    away = grid @ affine[:3, :3].T.astype(np.float32) + (
+        affine[:3, 3] - reference.center_scanner_mm
+    ).astype(np.float32)
+    faceless = np.where(0.8 * away[..., 1] - 0.6 * away[..., 2] > 82.0, 0.0, image)
+    yield "face removed", check_volume(faceless.astype(np.float32), affine), still
+    outside = distance_to(
+        voxels_inside(
+            reference.scalp.vertices_scanner_mm, reference.scalp.faces, affine, image.shape
+        )
+    )
+    zeroed = np.where((outside > 6) & (away[..., 2] > -60.0), 0.0, image)
+    yield "background zeroed", check_volume(zeroed.astype(np.float32), affine), still
+    painted, its_affine, _ = painted_head(which, NAMES_61, 0)
+    yield "61 painted capsules", check_volume(painted, its_affine), still
+
+
 def perturbed_figures() -> None:
     """Shift of the surfaces on the vault when a real head is disturbed."""
     for name, path in (("S1", real_heads.s1()), ("ch2", real_heads.ch2())):
         volume = read(path)
         reference, _ = solve(volume)
-        image = np.asarray(volume.intensity)
-        affine = np.asarray(volume.scanner_from_voxel)
-        white = float(np.median(image[np.asarray(reference.tissues) == WHITE]))
-        ramp = np.linspace(-1, 1, image.shape[1])[None, :, None]
-        rng = np.random.default_rng(0)
-        cases = {"13 times brighter": image * 13}
-        for noise in (3, 6, 9):
-            real = image + rng.normal(0, noise / 100 * white, image.shape)
-            cases[f"noise {noise} %"] = np.hypot(
-                real, rng.normal(0, noise / 100 * white, image.shape)
+        for label, changed, back in disturbed(volume, reference, name.lower()):
+            skin = find_skin(changed)
+            centers, capsule_mm = None, None
+            if "capsules" in label:
+                markers = find_markers(changed, skin)
+                centers = markers.centers_scanner_mm[markers.score > 0.5]
+                capsule_mm = markers.capsule_mm
+            head = build_head(
+                changed, skin, capsule_centers_scanner_mm=centers, capsule_mm=capsule_mm
             )
-        for bias in (20, 45):
-            cases[f"bias {bias} %"] = image * (1 + bias / 100 * ramp)
-        for label, changed in cases.items():
-            head, _ = solve(check_volume(changed.astype(np.float32), affine))
             words = []
             for surface in SURFACES:
-                points = getattr(head, surface).vertices_scanner_mm[vault(head)]
+                points = apply_affine(back, getattr(head, surface).vertices_scanner_mm)
+                rays = points - reference.center_scanner_mm
+                up = rays[:, 2] / np.linalg.norm(rays, axis=1) > VAULT
                 other = getattr(reference, surface)
-                shift = distance_to_mesh(points, other.vertices_scanner_mm, other.faces, 20.0)
+                shift = distance_to_mesh(points[up], other.vertices_scanner_mm, other.faces, 20.0)
                 words.append(f"{surface} {shift.mean():.2f}")
-            print(f"{name}, {label}: mean shift on the vault, mm: {', '.join(words)}")
+            print(f"{name}, {label}: mean shift on the vault, mm: {', '.join(words)}", flush=True)
+        for label, voxel in (("2 mm", (2.0, 2.0, 2.0)), ("1 x 1 x 3 mm", (1.0, 1.0, 3.0))):
+            grid = Condition(title=label, count=61, cap={}, voxel_mm=voxel)
+            coarse = check_volume(
+                *regrid(np.asarray(volume.intensity), np.asarray(volume.scanner_from_voxel), grid)
+            )
+            try:
+                head, _ = solve(coarse)
+            except LocatorError as error:
+                print(f"{name}, {label}: refused: {error}", flush=True)
+                continue
+            change = 100 * (head.brain_volume_ml / reference.brain_volume_ml - 1)
+            told = [one.problem for one in head.findings if one.level == "look"]
+            print(f"{name}, {label}: brain {change:+.1f} %; told: {told}", flush=True)
 
 
 def main(parts: list[str]) -> None:

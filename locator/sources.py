@@ -1,4 +1,4 @@
-"""Where activity may be: a grid of sources in the grey matter or the whole brain."""
+"""Where activity may be: sources in the grey matter, the whole brain or along the cortex."""
 
 from __future__ import annotations
 
@@ -11,8 +11,9 @@ from scipy import ndimage
 from scipy.spatial import cKDTree
 
 from locator.errors import HeadError
-from locator.geometry import apply_affine, voxel_sizes_mm
+from locator.geometry import apply_affine, vertex_normals, voxel_sizes_mm
 from locator.head import BRAIN_STEM, CEREBELLUM, CSF, GREY, WHITE, Head, Surface
+from locator.head.cortex import find_cortex
 from locator.head.morphology import box_around
 from locator.head.shape import distance_to_mesh, fill_mesh
 from locator.results import Finding, Frozen, Progress
@@ -21,7 +22,7 @@ logger = logging.getLogger(__name__)
 
 FloatArray = NDArray[np.float64]
 
-KINDS = ("grey", "brain")
+KINDS = ("grey", "brain", "cortex")
 
 LEAST_SHARE = {"grey": 0.2, "brain": 0.5}
 """A grid point is kept when at least this share of the cell around it is of its tissue."""
@@ -45,7 +46,7 @@ class Sources(Frozen):
     normals : (S, 3) ndarray
         Unit vectors out of the cortex; NaN where there is none.
     kind : str
-        `grey` or `brain`.
+        `grey`, `brain` or `cortex`.
     spacing_mm : float
     nearest_source : (I, J, K) ndarray of int32
         For each voxel of the T1 grid the index of its nearest source, -1 outside the source space.
@@ -76,11 +77,13 @@ def make_sources(
     Parameters
     ----------
     head : Head
-    kind : {"grey", "brain"}
+    kind : {"grey", "brain", "cortex"}
         ``grey``: cerebral grey matter, without cerebellum and brain stem. ``brain``: all of the
-        brain with both.
+        brain with both. ``cortex``: on the surface half-way through the cortex
+        (`locator.head.cortex`), one source in each cell of the grid that it passes, with that
+        surface's normal.
     spacing_mm : float
-        Distance of the grid's points, 2 to 20 mm.
+        Distance of the grid's points or width of its cells, 2 to 20 mm.
     margin_mm : float
         Least distance to the inner skull, mm; boundary elements lose accuracy nearer to it.
         Points of tissue that lie nearer are moved in along the surface's normal, by at most
@@ -113,9 +116,9 @@ def make_sources(
         progress(0.0, "laying the sources")
     tissues = np.asarray(head.tissues)
     wanted = (
-        tissues == GREY
-        if kind == "grey"
-        else np.isin(tissues, (GREY, WHITE, BRAIN_STEM, CEREBELLUM))
+        np.isin(tissues, (GREY, WHITE, BRAIN_STEM, CEREBELLUM))
+        if kind == "brain"
+        else tissues == GREY
     )
     affine = np.asarray(head.scanner_from_voxel)
     voxel_mm3 = abs(float(np.linalg.det(affine[:3, :3])))
@@ -128,16 +131,20 @@ def make_sources(
     voxels = np.argwhere(wanted)
     places = apply_affine(affine, voxels)
     origin = np.asarray(head.center_scanner_mm)
-    cells = np.rint((places - origin) / spacing_mm).astype(np.int64)
-    unique, inverse, counts = np.unique(cells, axis=0, return_inverse=True, return_counts=True)
-    share = counts * voxel_mm3 / spacing_mm**3
-    kept = share >= LEAST_SHARE[kind]
-    points = unique[kept] * spacing_mm + origin
-    del inverse
-    points, moved = _keep_clear(points, head.inner_skull, margin_mm, spacing_mm / 2)
-    tree = cKDTree(places)
-    reach, _ = tree.query(points, distance_upper_bound=0.75 * spacing_mm)
-    points = points[np.isfinite(reach)]
+    normals = None
+    if kind == "cortex":
+        points, normals = _on_cortex(head, origin, spacing_mm)
+    else:
+        cells = np.rint((places - origin) / spacing_mm).astype(np.int64)
+        unique, counts = np.unique(cells, axis=0, return_counts=True)
+        share = counts * voxel_mm3 / spacing_mm**3
+        points = unique[share >= LEAST_SHARE[kind]] * spacing_mm + origin
+    points, good, moved = _keep_clear(points, head.inner_skull, margin_mm, spacing_mm / 2)
+    reach, _ = cKDTree(places).query(points, distance_upper_bound=0.75 * spacing_mm)
+    near = np.isfinite(reach)
+    points = points[near]
+    if normals is not None:
+        normals = normals[good][near]
     if len(points) < 50:
         msg = (
             f"Only {len(points)} sources fit into the source space {kind!r} at {spacing_mm:g} mm"
@@ -150,9 +157,9 @@ def make_sources(
     nearest_source = np.full(tissues.shape, -1, dtype=np.int32)
     found = np.isfinite(away)
     nearest_source[tuple(voxels[found].T)] = nearest[found]
-    normals = np.full(points.shape, np.nan)
-    if kind == "grey":
-        normals = _normals(tissues, affine, points)
+    if normals is None:
+        flat = np.full(points.shape, np.nan)
+        normals = _normals(tissues, affine, points) if kind == "grey" else flat
     findings = []
     uncovered = float((~found).mean())
     if uncovered > 0.05:
@@ -194,10 +201,30 @@ def _inside(points: FloatArray, surface: Surface) -> NDArray[np.bool_]:
     return inside
 
 
+def _on_cortex(head: Head, origin: FloatArray, spacing_mm: float) -> tuple[FloatArray, FloatArray]:
+    """One vertex of the cortex for each cell of the grid, and its outward normal."""
+    cortex = find_cortex(head)
+    vertices = np.asarray(cortex.vertices_scanner_mm)
+    normals = vertex_normals(vertices, np.asarray(cortex.faces))
+    cells = np.rint((vertices - origin) / spacing_mm).astype(np.int64)
+    _, cell, counts = np.unique(cells, axis=0, return_inverse=True, return_counts=True)
+    cell = cell.ravel()
+    middle = np.stack([np.bincount(cell, weights=axis) for axis in vertices.T], axis=1)
+    away = np.linalg.norm(vertices - (middle / counts[:, None])[cell], axis=1)
+    order = np.lexsort((away, cell))
+    first = order[np.concatenate([[0], np.cumsum(counts)[:-1]])]
+    # Cells that the surface only grazes belong to their neighbours.
+    first = first[counts >= 0.2 * np.median(counts)]
+    return vertices[first], normals[first]
+
+
 def _keep_clear(
     points: FloatArray, surface: Surface, margin_mm: float, furthest_mm: float
-) -> tuple[FloatArray, int]:
-    """Move points that are too near to the surface inward; drop those that would go too far."""
+) -> tuple[FloatArray, NDArray[np.bool_], int]:
+    """Move points that are too near to the surface inward; drop those that would go too far.
+
+    Returns the points that are left, which ones they are, and how many were moved.
+    """
     vertices = np.asarray(surface.vertices_scanner_mm)
     faces = np.asarray(surface.faces)
     center = vertices.mean(axis=0)
@@ -218,7 +245,7 @@ def _keep_clear(
         result[pending] += step * direction
         travelled[pending] += step
     moved = int((good & (travelled > 0)).sum())
-    return result[good], moved
+    return result[good], good, moved
 
 
 def _normals(tissues: NDArray[np.int32], affine: FloatArray, points: FloatArray) -> FloatArray:

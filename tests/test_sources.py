@@ -2,13 +2,16 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 from scipy.spatial import cKDTree
 
 from locator.errors import HeadError
-from locator.geometry import apply_affine
-from locator.head import BRAIN_STEM, CEREBELLUM, GREY, Head
+from locator.geometry import apply_affine, mesh_volume_mm3
+from locator.head import BRAIN_STEM, CEREBELLUM, GREY, WHITE, Head
+from locator.head.cortex import HALF_CORTEX_MM, find_cortex
 from locator.head.shape import distance_to_mesh
 from locator.sources import make_sources
 from tests.test_head import CENTER, ball_head
@@ -69,6 +72,39 @@ def test_the_brain_space_fills_the_brain(head, grey):
     assert len(brain.positions_scanner_mm) > 1.5 * len(grey.positions_scanner_mm)
     assert np.isnan(brain.normals).all()
     assert np.linalg.norm(brain.positions_scanner_mm - CENTER, axis=1).min() < 20
+
+
+def test_the_cortex_of_a_ball_is_a_sphere_half_a_cortex_over_white_matter(head):
+    cortex = find_cortex(head)
+    radius = np.linalg.norm(cortex.vertices_scanner_mm - CENTER, axis=1)
+    # White matter ends at 66 mm; the shell of grey is thicker than any cortex.
+    assert abs(np.median(radius) - (66 + HALF_CORTEX_MM)) < 0.4
+    assert np.quantile(np.abs(radius - np.median(radius)), 0.95) < 1.0
+    assert mesh_volume_mm3(cortex.vertices_scanner_mm, cortex.faces) > 0
+
+
+def test_sources_along_the_cortex_have_its_normals(head):
+    along = make_sources(head, kind="cortex")
+    out = along.positions_scanner_mm - CENTER
+    radius = np.linalg.norm(out, axis=1)
+    cosine = (out / radius[:, None] * along.normals).sum(axis=1)
+    assert np.abs(radius - (66 + HALF_CORTEX_MM)).mean() < 0.7
+    assert np.median(np.degrees(np.arccos(np.clip(cosine, -1, 1)))) < 8
+    # One in every cell that the sphere passes: about 1.5 for each square of the spacing.
+    squares = 4 * np.pi * 67.3**2 / 5.0**2
+    assert 0.8 * squares < len(radius) < 2.2 * squares
+    inner = head.inner_skull
+    gap = distance_to_mesh(along.positions_scanner_mm, inner.vertices_scanner_mm, inner.faces, 10.0)
+    assert gap.min() >= 3.0
+    chosen = np.asarray(along.nearest_source)
+    assert (chosen[np.asarray(head.tissues) == GREY] >= 0).mean() > 0.9
+
+
+def test_a_head_without_white_matter_has_no_cortex(head):
+    tissues = np.where(np.asarray(head.tissues) == WHITE, GREY, np.asarray(head.tissues))
+    with pytest.raises(HeadError, match="white matter"):
+        find_cortex(replace(head, tissues=tissues))
+    assert len(find_cortex(head).faces) > 1000
 
 
 def test_a_wider_spacing_gives_fewer_sources(head, grey):

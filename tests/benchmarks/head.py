@@ -13,11 +13,13 @@ import time
 import nibabel as nib
 import numpy as np
 from scipy import ndimage
+from scipy.spatial import cKDTree
 from scipy.spatial.transform import Rotation
 
 from locator.errors import LocatorError
 from locator.geometry import apply_affine, mesh_volume_mm3
 from locator.head import BRAIN_STEM, CEREBELLUM, GREY, WHITE, Head, build_head
+from locator.head.cortex import find_cortex
 from locator.head.morphology import close, distance_to
 from locator.head.shape import distance_to_mesh, fill_mesh
 from locator.markers import find_markers
@@ -133,6 +135,9 @@ def s1_figures() -> None:
     at = apply_affine(np.linalg.inv(affine), inner.vertices_scanner_mm)
     gap = ndimage.map_coordinates(height, at.T, order=1, mode="nearest")[vault(head)]
     ribbon = masks["pia"] & ~masks["wm"]
+    cortex = np.asarray(find_cortex(head).vertices_scanner_mm)
+    middle = np.vstack([0.5 * (meshes[f"pia_{s}h"][0] + meshes[f"wm_{s}h"][0]) for s in "lr"])
+    there, back = cKDTree(middle).query(cortex)[0], cKDTree(cortex).query(middle)[0]
     near = (distance_to(masks["pia"]) <= 2) & (distance_to(~masks["pia"]) <= 4.5)
     grey = np.asarray(head.tissues) == GREY
     print(f"    pial vertices inside the inner skull: {100 * share:.2f} %")
@@ -143,6 +148,11 @@ def s1_figures() -> None:
         f"    grey Dice against the ribbon: {dice(grey & near, ribbon & near):.3f} in the shell from"
         f" 2 mm outside to 4.5 mm inside the pia,"
         f" {dice(grey & (distance_to(masks['pia']) <= 2), ribbon):.3f} with deep grey matter"
+    )
+
+    print(
+        f"    middle of the cortex: ours to the true one {there.mean():.2f} mm (95 %:"
+        f" {np.quantile(there, 0.95):.2f}), back {back.mean():.2f} ({np.quantile(back, 0.95):.2f})"
     )
 
 

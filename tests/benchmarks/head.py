@@ -1,7 +1,7 @@
 """Figures of the head stage: real heads against what is known of them, invented heads exactly.
 
-Run with ``python -m tests.benchmarks.head [real] [invented] [perturbed]``. Real heads come from the
-package registries (see ``tests/real_heads.py``).
+Run with ``python -m tests.benchmarks.head [real] [invented] [forward] [perturbed]``. Real heads come
+from the package registries (see ``tests/real_heads.py``).
 """
 
 from __future__ import annotations
@@ -17,11 +17,13 @@ from scipy.spatial import cKDTree
 from scipy.spatial.transform import Rotation
 
 from locator.errors import LocatorError
+from locator.forward import compute_lead_field, electrode_rows
 from locator.geometry import apply_affine, mesh_volume_mm3
-from locator.head import BRAIN_STEM, CEREBELLUM, GREY, WHITE, Head, build_head
+from locator.head import BRAIN_STEM, CEREBELLUM, GREY, WHITE, Head, Surface, build_head
 from locator.head.cortex import find_cortex
 from locator.head.morphology import close, distance_to
-from locator.head.shape import distance_to_mesh, fill_mesh
+from locator.head.shape import distance_to_mesh, fill_mesh, separate
+from locator.head.skull import mask_radii
 from locator.markers import find_markers
 from locator.skin import find_skin
 from locator.sources import make_sources
@@ -204,6 +206,83 @@ def invented_figures(seeds=range(1, 11)) -> None:
         )
 
 
+def on_rays(head: Head, mesh) -> Surface:
+    """An exact surface as radii along the rays of ours, so that both have the same triangles."""
+    vertices, faces = np.asarray(mesh[0], float), np.asarray(mesh[1], np.int32)
+    low = np.floor(vertices.min(axis=0)) - 2
+    shape = tuple(int(n) for n in 2 * (np.ceil(vertices.max(axis=0)) - low) + 5)
+    mask = fill_mesh(2 * (vertices - low), faces, shape)
+    height = distance_to(mask) - distance_to(~mask)
+    height -= 0.5 * np.sign(height)
+    rays = head.scalp.vertices_scanner_mm - head.center_scanner_mm
+    rays /= np.linalg.norm(rays, axis=1, keepdims=True)
+    radii = 0.5 * mask_radii(
+        height, 2 * (head.center_scanner_mm - low), rays, float(np.linalg.norm(shape))
+    )
+    return Surface(
+        vertices_scanner_mm=head.center_scanner_mm + radii[:, None] * rays,
+        faces=head.scalp.faces,
+        sd_mm=np.zeros(len(rays)),
+    )
+
+
+def forward_figures(seeds=range(1, 5)) -> None:
+    """Lead fields with our surfaces against those with the exact ones, by depth of the source."""
+    from synthetic_heads import heads
+    from synthetic_heads.cap import make_cap
+    from synthetic_heads.scan import make_scan
+
+    # Distances are cut off at 20 mm: the last row is all that lies deeper than 15.
+    edges = np.array([3.0, 6.0, 10.0, 15.0, 90.0])
+    table = []
+    for seed in seeds:
+        truth = heads.make_head(seed, "shaped")
+        head, _ = solve(check_volume(*make_scan(truth, None, seed=seed)))
+        exact = {name: on_rays(head, truth.surfaces[name]) for name in SURFACES}
+        outer = exact["outer_skull"]
+        radii = [np.linalg.norm(exact[n].vertices_scanner_mm - head.center_scanner_mm, axis=1)
+                 for n in SURFACES]  # fmt: skip
+        rays = (outer.vertices_scanner_mm - head.center_scanner_mm) / radii[1][:, None]
+        # The solver needs the separation that our surfaces have too.
+        for low, high in ((0, 1), (1, 2)):
+            radii[high] = separate(radii[low], radii[high], rays, np.asarray(outer.faces), 2.5)
+        exact = {
+            name: Surface(
+                vertices_scanner_mm=head.center_scanner_mm + length[:, None] * rays,
+                faces=outer.faces,
+                sd_mm=np.zeros(len(rays)),
+            )
+            for name, length in zip(SURFACES, radii, strict=True)
+        }
+        sources = make_sources(head, spacing_mm=8.0).positions_scanner_mm
+        inner = exact["inner_skull"]
+        depth = -signed_distance(sources, inner.vertices_scanner_mm, inner.faces)
+        sources, depth = sources[depth > 3.0], depth[depth > 3.0]
+        cap = make_cap(*truth.surfaces["scalp"], truth.landmarks_mm, NAMES_61, seed)
+        fields = []
+        for surfaces in ({n: getattr(head, n) for n in SURFACES}, exact):
+            lead = compute_lead_field(
+                surfaces["scalp"], surfaces["outer_skull"], surfaces["inner_skull"], sources
+            )
+            rows = electrode_rows(lead, cap.contacts_mm)
+            fields.append(rows - rows.mean(axis=0))
+        ours, right = fields
+        sizes = [np.sqrt((f**2).sum(axis=0)) for f in (ours, right)]
+        rdm = np.sqrt((((ours / sizes[0]) - (right / sizes[1])) ** 2).sum(axis=0)).mean(axis=1)
+        mag = (sizes[0] / sizes[1]).mean(axis=1)
+        bins = np.digitize(depth, edges) - 1
+        table.append(
+            [[rdm[bins == k].mean(), mag[bins == k].mean()] for k in range(len(edges) - 1)]
+        )
+        print(f"shaped {seed}: {len(sources)} sources", flush=True)
+    mean = np.mean(table, axis=0)
+    for k, (rdm_mean, mag_mean) in enumerate(mean):
+        print(
+            f"from {edges[k]:.0f} mm inside the inner skull: RDM {rdm_mean:.3f},"
+            f" MAG {mag_mean:.3f} (mean of {len(table)} shaped heads)"
+        )
+
+
 def disturbed(volume: Volume, reference: Head, which: str):
     """Yield a name, the disturbed volume, and the matrix that brings its world back."""
     image = np.asarray(volume.intensity)
@@ -294,6 +373,8 @@ def main(parts: list[str]) -> None:
         describe("2 mm head", *solve(volume))
     if not parts or "invented" in parts:
         invented_figures()
+    if not parts or "forward" in parts:
+        forward_figures()
     if not parts or "perturbed" in parts:
         perturbed_figures()
 

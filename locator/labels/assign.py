@@ -76,8 +76,11 @@ def label_markers(
     places after a slide, a turn, a stretch and a smooth deformation, each with a Gaussian prior;
     each electrode is then displaced by a jitter of unknown size. The sum over all assignments of
     names to capsules (with absent capsules and stray blobs) is computed by belief propagation;
-    fits from many starts, also a row or column away, are weighed by their evidence. The
-    confidence of a label is its share of that whole sum.
+    fits from many starts, also a row or column away, with a stiff and a soft cap, are weighed by
+    their evidence. Each label is judged by where the other electrodes put it, not by a fit that
+    its own capsule has pulled at. The confidence of a label is its share of that whole sum,
+    stated a little lower (`locator.labels.doubts.stated_confidence`), times the probability that
+    left and right are not exchanged where the layout can tell.
     """
     chosen = LabelOptions() if options is None else options
     tell: Progress = progress if progress is not None else (lambda _fraction, _words: None)

@@ -120,6 +120,7 @@ def _add_head(commands: Any) -> None:
     parser.add_argument(
         "--capsule-mm", type=float, metavar="MM", help="capsule diameter (default: estimated)"
     )
+    _add_surfaces(parser)
     _add_strict(parser)
 
 
@@ -168,11 +169,21 @@ def _add_run(commands: Any) -> None:
         metavar=("SCALP", "SKULL", "BRAIN"),
         help="S/m (default 0.33 0.0132 0.33)",
     )
+    _add_surfaces(group)
     group.add_argument(
         "--permutations", type=int, metavar="N", help="sign flips of the test (default 5000)"
     )
     group.add_argument("--seed", type=int, metavar="N", help="default 0")
     _add_strict(parser)
+
+
+def _add_surfaces(parser: Any) -> None:
+    parser.add_argument(
+        "--surfaces",
+        metavar="DIR",
+        help="folder with own surfaces in place of ours: scalp, outer_skull, inner_skull"
+        " (.surf.gii or .gii, scanner mm), any of the three",
+    )
 
 
 def _add_electrodes(parser: Any, *, names_required: bool) -> None:
@@ -287,7 +298,7 @@ def _silent(_stage: str, _fraction: float, _words: str) -> None:
 
 FLAGS = (
     "t1 eeg out subject names also capsule_mm holder_mm side_marker layout landmarks electrodes"
-    " event epoch window method source_space conductivity permutations seed"
+    " event epoch window method source_space surfaces conductivity permutations seed"
 ).split()
 
 

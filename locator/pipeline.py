@@ -12,7 +12,7 @@ from numpy.typing import ArrayLike, NDArray
 from locator.errors import LabelError, MarkerError
 from locator.forward import ForwardOptions, LeadField, compute_lead_field, electrode_rows
 from locator.geometry import apply_affine
-from locator.head import Head, HeadOptions, build_head
+from locator.head import Head, HeadOptions, build_head, replace_surfaces
 from locator.inverse import Inverse, InverseOptions, make_inverse
 from locator.labels import Electrodes, LabelOptions, label_markers
 from locator.layout import Layout
@@ -447,6 +447,7 @@ def build(
     electrodes: Electrodes | None,
     *,
     head_options: HeadOptions,
+    own_surfaces: Mapping[str, tuple[ArrayLike, ArrayLike]] | None = None,
     step: Step = plain_step,
 ) -> Head:
     """Build the three surfaces and the tissues, with the capsules taken out.
@@ -459,6 +460,8 @@ def build(
         None when there is none to take out.
     electrodes : Electrodes or None
     head_options : HeadOptions
+    own_surfaces : mapping of role to (vertices, faces), optional
+        Surfaces of the user's in place of ours, scanner mm; see `locator.head.replace_surfaces`.
     step : Step
 
     Returns
@@ -468,10 +471,10 @@ def build(
     Raises
     ------
     HeadError
-        If no surfaces fit for a field model can be made.
+        If no surfaces fit for a field model can be made, or those of the user's are not.
     """
     capsules = capsules_to_remove(markers, electrodes)
-    return step(
+    head = step(
         "head",
         build_head,
         volume,
@@ -480,6 +483,9 @@ def build(
         capsule_mm=None if markers is None else markers.capsule_mm,
         options=head_options,
     )
+    if not own_surfaces:
+        return head
+    return step("given surfaces", replace_surfaces, head, dict(own_surfaces), options=head_options)
 
 
 def head_alone(
@@ -488,6 +494,7 @@ def head_alone(
     skin_options: SkinOptions,
     marker_options: MarkerOptions,
     head_options: HeadOptions,
+    own_surfaces: Mapping[str, tuple[ArrayLike, ArrayLike]] | None = None,
     step: Step = plain_step,
 ) -> tuple[Skin, Markers | None, Head]:
     """Build skin, capsules (None when there are none) and head without any names.
@@ -497,6 +504,8 @@ def head_alone(
     volume : Volume
     skin_options, marker_options, head_options
         Settings of the stages.
+    own_surfaces : mapping of role to (vertices, faces), optional
+        As in `build`.
     step : Step
 
     Returns
@@ -512,7 +521,16 @@ def head_alone(
     """
     skin = step("skin", find_skin, volume, options=skin_options)
     markers = _markers_if_any(volume, skin, marker_options, step)
-    return skin, markers, build(volume, skin, markers, None, head_options=head_options, step=step)
+    head = build(
+        volume,
+        skin,
+        markers,
+        None,
+        head_options=head_options,
+        own_surfaces=own_surfaces,
+        step=step,
+    )
+    return skin, markers, head
 
 
 @dataclass(frozen=True, eq=False, kw_only=True, slots=True)
@@ -561,7 +579,7 @@ def project(
     electrodes : Electrodes
         Must hold every electrode of the epochs.
     epochs : Epochs
-    source_space : {"grey", "brain"}
+    source_space : {"grey", "brain", "cortex"}
     forward_options, inverse_options
         Settings of the two stages.
     window_s : (2,) sequence of float or None

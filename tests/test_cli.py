@@ -20,10 +20,10 @@ OPTIONS = {
     "begin": "--t1 --eeg --out",
     "find": "--names --also --capsule-mm --holder-mm --right-marker --left-marker --layout"
     " --landmarks --eeg --out --strict",
-    "head": "--out --capsule-mm --strict",
+    "head": "--out --capsule-mm --surfaces --strict",
     "run": "--t1 --eeg --out --subject --names --also --capsule-mm --holder-mm --right-marker"
     " --left-marker --layout --landmarks --electrodes --event --epoch --window --method"
-    " --source-space --conductivity --permutations --seed --again --strict",
+    " --source-space --surfaces --conductivity --permutations --seed --again --strict",
     "inspect": "--picture",
 }
 
@@ -64,7 +64,6 @@ def test_help_without_a_command_names_the_commands_and_no_other(capsys):
         ["head"],
         ["run", "--band", "8", "12"],
         ["run", "--against", "other"],
-        ["run", "--surfaces", "dir"],
         ["run", "--share"],
         ["run", "--source-space", "cortex"],
         ["run", "--method", "magic"],
@@ -138,13 +137,14 @@ def test_a_full_session_file_is_understood_and_paths_are_relative_to_it(tmp_path
         'names = "names.txt"\nalso = ["FCz"]\ncapsule_mm = 8\nholder_mm = 2.5\n'
         'side_marker = "right"\nlayout = "cap.tsv"\nlandmarks = "l.json"\n'
         'electrodes = "e.tsv"\nevent = "S  1"\nepoch = [-0.1, 0.4]\nwindow = [0, 0.3]\n'
-        'method = "dspm"\nsource_space = "brain"\nconductivity = [0.4, 0.01, 0.4]\n'
+        'method = "dspm"\nsource_space = "brain"\nsurfaces = "own"\nconductivity = [0.4, 0.01, 0.4]\n'
         "permutations = 500\nseed = 3\n",
     )
     options = gather_options({}, path)
     assert options.t1 == folder / "../scans/t1.nii.gz"
     assert options.eeg == folder / "rec.vhdr"
     assert options.names == str(folder / "names.txt")
+    assert options.surfaces == folder / "own"
     assert options.window == (0.0, 0.3)
     assert (options.side_marker, options.method, options.seed) == ("right", "dspm", 3)
     assert set(read_session_file(path)) == set(KEYS)
@@ -172,7 +172,7 @@ def test_flags_win_over_the_file(tmp_path):
         ('T1 = "a.nii"\n', SettingError, "'T1'.*'t1'"),
         ("band = [8, 12]\n", SettingError, "'band'"),
         ('against = "other"\n', SettingError, "'against'"),
-        ('surfaces = "dir"\n', SettingError, "'surfaces'"),
+        ("surfaces = 5\n", SettingError, "surfaces.*5"),
         ("[stage]\nx = 1\n", SettingError, "'stage'"),
         ("t1 = \n", SettingError, "not valid TOML.*line 1"),
         ('t1 = "a"\nt1 = "b"\n', SettingError, "not valid TOML"),

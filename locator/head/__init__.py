@@ -1,6 +1,7 @@
 """Scalp, outer skull, inner skull and tissues from the one T1 volume."""
 
 from locator.head.build import build_head
+from locator.head.given import ROLES, replace_surfaces, skull_thickness_mm
 from locator.head.model import (
     BONE,
     BRAIN_STEM,
@@ -22,10 +23,13 @@ __all__ = [
     "CSF",
     "GREY",
     "OTHER",
+    "ROLES",
     "SOFT",
     "WHITE",
     "Head",
     "HeadOptions",
     "Surface",
     "build_head",
+    "replace_surfaces",
+    "skull_thickness_mm",
 ]

@@ -40,7 +40,8 @@ class Head(Frozen):
     Attributes
     ----------
     scalp, outer_skull, inner_skull : Surface
-        Nested, never touching; vertex i of each lies on the same ray.
+        Nested, never touching; vertex i of each of ours lies on the same ray (not of those in
+        `given`, which have vertices of their own).
     tissues : (I, J, K) ndarray of int32
         On the T1's own grid, BIDS common tissue labels: 0 background, 1 grey matter, 2 white
         matter, 3 CSF, 4 bone, 5 soft tissue, 6 other, 10 brain stem, 11 cerebellum.
@@ -50,10 +51,13 @@ class Head(Frozen):
         Where the rays start.
     padded_mm : (V,) ndarray
         How far the outer skull and the scalp together were moved out at each vertex to keep the
-        least separation; 0 where the image was followed.
+        least separation; 0 where the image was followed. On the rays of our surfaces; all 0 when
+        outer skull and scalp were both given.
     brain_volume_ml : float
         Grey and white matter with cerebellum and brain stem, without CSF.
     findings : tuple of Finding
+    given : tuple of str
+        Which surfaces the user gave in place of ours, from the inside out.
     """
 
     scalp: Surface
@@ -65,6 +69,7 @@ class Head(Frozen):
     padded_mm: FloatArray
     brain_volume_ml: float
     findings: tuple[Finding, ...] = ()
+    given: tuple[str, ...] = ()
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)

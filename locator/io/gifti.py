@@ -3,15 +3,21 @@
 from __future__ import annotations
 
 from pathlib import Path
+from typing import Any
 
 import nibabel as nib
 import numpy as np
+from numpy.typing import NDArray
 
 from locator.errors import FileError
+from locator.geometry import apply_affine
 from locator.head import Surface
 from locator.io.files import existing_file, write_bytes
 
 SCANNER = "NIFTI_XFORM_SCANNER_ANAT"
+
+TEMPLATES = (3, 4, 5)
+"""NIfTI codes of spaces that are no person's: Talairach, MNI 152, other template."""
 
 
 def write_surface(path: Path, surface: Surface, *, name: str, description: str) -> None:
@@ -64,14 +70,17 @@ def write_surface(path: Path, surface: Surface, *, name: str, description: str) 
 
 
 def read_surface(path: Path) -> Surface:
-    """Read a surface of points and triangles.
+    """Read a surface of points and triangles, in scanner mm.
 
-    The file does not hold how well each vertex is known: ``sd_mm`` comes back as NaN.
+    The file says which space its points are in and may hold an affine to another: points in
+    scanner space, in an aligned one or in one that is not told are taken as they are; others are
+    moved when the affine leads to scanner space. The file does not hold how well each vertex is
+    known: ``sd_mm`` comes back as NaN.
 
     Raises
     ------
     FileError
-        If the file is absent, no GIFTI, or holds no surface.
+        If the file is absent, no GIFTI, holds no surface, or one in a template's space.
     """
     existing_file(path, "surface")
     try:
@@ -87,9 +96,39 @@ def read_surface(path: Path) -> Surface:
             " a surface has one of each."
         )
         raise FileError(msg)
-    vertices = np.asarray(points[0].data, dtype=np.float64)
+    vertices = _in_scanner(np.asarray(points[0].data, dtype=np.float64), points[0].coordsys, path)
     return Surface(
         vertices_scanner_mm=vertices,
         faces=np.asarray(triangles[0].data, dtype=np.int32),
         sd_mm=np.full(len(vertices), np.nan),
     )
+
+
+def _in_scanner(vertices: NDArray[np.float64], system: Any, path: Path) -> NDArray[np.float64]:
+    """Points of a file in scanner mm, by what it says of their space."""
+    if system is None:
+        return vertices
+    space, other = (_code(value) for value in (system.dataspace, system.xformspace))
+    if space == _code(SCANNER) or vertices.ndim != 2 or vertices.shape[1] != 3:
+        return vertices
+    affine = np.eye(4) if system.xform is None else np.asarray(system.xform, dtype=np.float64)
+    if other == _code(SCANNER):
+        sound = affine.shape == (4, 4) and np.isfinite(affine).all()
+        if not sound or abs(np.linalg.det(affine[:3, :3])) < 1e-6:
+            msg = f"{path} holds an affine to scanner space that cannot be used. Write it again."
+            raise FileError(msg)
+        return apply_affine(affine, vertices)
+    if space in TEMPLATES:
+        name = nib.nifti1.xform_codes.label[space]
+        msg = (
+            f"The points of {path} are in {name} space and the file holds no affine to scanner"
+            " space. Export the surface in scanner mm of this T1."
+        )
+        raise FileError(msg)
+    return vertices
+
+
+def _code(space: Any) -> int:
+    """Number of a space that a file names; 0 (not told) for one that is not known."""
+    codes: Any = nib.nifti1.xform_codes.code
+    return int(codes[space]) if space in codes else 0

@@ -10,6 +10,7 @@ from jinja2 import Environment, StrictUndefined, select_autoescape
 from markupsafe import Markup
 
 from locator.geometry import mesh_volume_mm3
+from locator.head import skull_thickness_mm
 from locator.pipeline import RunResults
 from locator.report import figures
 from locator.report.raster import capsule_tile, png_uri
@@ -169,17 +170,30 @@ def _head(run: RunResults) -> dict[str, Any] | None:
     if head is None:
         return None
     litres = mesh_volume_mm3(head.inner_skull.vertices_scanner_mm, head.inner_skull.faces) / 1e6
-    thickness = np.linalg.norm(
-        head.outer_skull.vertices_scanner_mm - head.inner_skull.vertices_scanner_mm, axis=1
-    )
-    low, middle, high = np.percentile(thickness, [5, 50, 95])
+    low, middle, high = np.percentile(skull_thickness_mm(head), [5, 50, 95])
+    way = "the shortest way across" if set(head.given) - {"scalp"} else "along its rays"
     sentence = (
-        f"The inner skull holds {litres:.2f} L; the skull is {middle:.1f} mm thick along its rays"
-        f" (5th to 95th percentile {low:.1f} to {high:.1f} mm). Skull from T1 leans on a prior where"
-        f" bone and fluid look alike; the surfaces are known to about"
-        f" {_number(float(np.median(head.outer_skull.sd_mm)))} mm (outer) and"
-        f" {_number(float(np.median(head.inner_skull.sd_mm)))} mm (inner)."
+        f"The inner skull holds {litres:.2f} L; the skull is {middle:.1f} mm thick {way}"
+        f" (5th to 95th percentile {low:.1f} to {high:.1f} mm)."
     )
+    if head.given:
+        listed = [role.replace("_", " ") for role in reversed(head.given)]
+        words = " and ".join([", ".join(listed[:-1]), listed[-1]] if len(listed) > 1 else listed)
+        sentence += f" The {words} {'was' if len(listed) == 1 else 'were'} given, not made here."
+    known = [
+        f"{_number(float(np.median(surface.sd_mm)))} mm ({name})"
+        for name, role, surface in (
+            ("outer", "outer_skull", head.outer_skull),
+            ("inner", "inner_skull", head.inner_skull),
+        )
+        if role not in head.given
+    ]
+    if known:
+        sentence += (
+            " Skull from T1 leans on a prior where bone and fluid look alike; the"
+            f" {'surfaces are' if len(known) == 2 else 'surface is'} known to about"
+            f" {' and '.join(known)}."
+        )
     if run.sources is not None and run.lead_field is not None:
         scalp, skull, brain = run.lead_field.conductivity_s_per_m
         sentence += (

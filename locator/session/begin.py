@@ -144,6 +144,7 @@ def session_text(
         "# Estimate and test.",
         f'# method = "{METHODS[0]}"      # {", ".join(METHODS)}',
         f'# source_space = "{default.source_space}"   # {" or ".join(SOURCE_SPACES)}',
+        '# surfaces = "surfaces"    # folder with own scalp, outer_skull, inner_skull (.surf.gii)',
         f"# conductivity = [{scalp}, {skull}, {brain}]   # S/m: scalp, skull, brain",
         f"# permutations = {default.permutations}",
         f"# seed = {default.seed}",

@@ -11,9 +11,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from locator.errors import CommandLineError, FileError, LabelError
+from locator.head import ROLES
 from locator.io import bids, reviews
 from locator.io.eeg import read_recording
 from locator.io.files import existing_file, read_text, sha256_of
+from locator.io.gifti import read_surface
 from locator.io.nifti import Grid, read_grid, read_volume, sidecar_path
 from locator.layout import (
     Layout,
@@ -52,6 +54,8 @@ class Inputs:
     given : tuple or None
         Names, positions and standard deviations from ``--electrodes``.
     landmarks : (3, 3) ndarray or None
+    surfaces : dict of str to tuple of ndarray
+        Vertices (scanner mm) and faces of surfaces from ``--surfaces``, by role.
     reviews : tuple of Review
     files : list of InputFile
     sizes : dict of str to int
@@ -68,6 +72,7 @@ class Inputs:
     channel_names: tuple[str, ...] = ()
     given: tuple[tuple[str, ...], NDArray[np.float64], NDArray[np.float64]] | None = None
     landmarks: NDArray[np.float64] | None = None
+    surfaces: dict[str, tuple[NDArray[np.float64], NDArray[np.int32]]] = field(default_factory=dict)
     reviews: tuple[Review, ...] = ()
     files: list[InputFile] = field(default_factory=list)
     sizes: dict[str, int] = field(default_factory=dict)
@@ -117,6 +122,8 @@ def read_inputs(options: SessionOptions, *, names: bool, recording: bool, out: P
     if options.landmarks is not None:
         inputs.landmarks = bids.read_landmarks(options.landmarks)
         _note(inputs, "landmarks", options.landmarks)
+    if options.surfaces is not None:
+        _read_surfaces(inputs, options.surfaces, out)
     wants_channels = names and options.names in (None, "eeg")
     if recording or (wants_channels and options.eeg is not None):
         assert options.eeg is not None
@@ -159,6 +166,57 @@ def recording_files(path: Path) -> list[Path]:
     elif path.suffix.lower() == ".set":
         files.append(path.with_suffix(".fdt"))
     return [files[0], *(extra for extra in files[1:] if extra.is_file())]
+
+
+def _read_surfaces(inputs: Inputs, folder: Path, out: Path) -> None:
+    """Read the surfaces of a folder by their names; tell what is there but not used."""
+    wanted = ", ".join(f"{role}.surf.gii" for role in reversed(ROLES))
+    if not folder.is_dir():
+        msg = (
+            f"There is no folder {folder} (wanted as surfaces). Give a folder with one or more of"
+            f" {wanted}."
+        )
+        raise FileError(msg)
+    if folder.resolve() == (out / "head").resolve():
+        msg = (
+            f"The folder of surfaces {folder} is where this command writes its own. Copy the"
+            " surfaces to another folder, or choose another --out."
+        )
+        raise CommandLineError(msg)
+    present = sorted(path for path in folder.iterdir() if path.name.lower().endswith(".gii"))
+    used = []
+    for role in ROLES:
+        found = [
+            path for path in present if path.name.lower() in (f"{role}.surf.gii", f"{role}.gii")
+        ]
+        if len(found) > 1:
+            msg = (
+                f"{folder} holds {' and '.join(path.name for path in found)}: it is not clear which"
+                f" is the {role.replace('_', ' ')}. Take one of them away."
+            )
+            raise FileError(msg)
+        if found:
+            surface = read_surface(found[0])
+            inputs.surfaces[role] = (surface.vertices_scanner_mm, surface.faces)
+            _note(inputs, f"{role.replace('_', ' ')} surface", found[0])
+            used.append(found[0])
+    if not used:
+        listed = ", ".join(path.name for path in present[:6]) or "no .gii file"
+        msg = f"{folder} (wanted as surfaces) holds {listed}, but none of {wanted}. Rename them so."
+        raise FileError(msg)
+    others = [path.name for path in present if path not in used]
+    if others:
+        inputs.findings.append(
+            Finding(
+                level="look",
+                stage="surfaces",
+                problem=f"{', '.join(others)} in {folder} {'is' if len(others) == 1 else 'are'} not"
+                " used.",
+                suggestion=f"Surfaces are known by their names: {wanted}.",
+                subject="surfaces",
+                doubt=0.3,
+            )
+        )
 
 
 @dataclass(frozen=True)

@@ -13,7 +13,7 @@ from typing import Any
 from locator.errors import CommandLineError, FileError, LocatorError, SettingError
 
 METHODS = ("eloreta", "sloreta", "dspm", "mne")
-SOURCE_SPACES = ("grey", "brain")
+SOURCE_SPACES = ("grey", "brain", "cortex")
 SIDES = ("right", "left")
 
 
@@ -52,6 +52,9 @@ class SessionOptions:
         ``eloreta``, ``sloreta``, ``dspm`` or ``mne``; default: the one of the inverse stage.
     source_space : str
         ``grey`` or ``brain``.
+    surfaces : Path or None
+        Folder with surfaces in place of ours: ``scalp``, ``outer_skull``, ``inner_skull``
+        (``.surf.gii`` or ``.gii``, scanner mm), any of the three.
     conductivity : (3,) tuple of float
         Scalp, skull, brain, S/m, each over 0 and up to 10; default 0.33 0.0132 0.33 (ratio 25:
         Lai et al. 2005, Clin Neurophysiol).
@@ -78,6 +81,7 @@ class SessionOptions:
     window: tuple[float, float] | None = None
     method: str | None = None
     source_space: str = "grey"
+    surfaces: Path | None = None
     conductivity: tuple[float, float, float] = (0.33, 0.0132, 0.33)
     permutations: int = 5000
     seed: int = 0
@@ -94,7 +98,7 @@ class SessionOptions:
         return values
 
 
-PATHS = ("t1", "eeg", "out", "layout", "landmarks", "electrodes")
+PATHS = ("t1", "eeg", "out", "layout", "landmarks", "electrodes", "surfaces")
 KEYS = tuple(field.name for field in fields(SessionOptions))
 
 

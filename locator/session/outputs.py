@@ -56,6 +56,10 @@ def write_found(out: Path, inputs: Inputs, electrodes: Electrodes, markers: Mark
 def write_head(out: Path, inputs: Inputs, head: Head) -> None:
     """Write the three surfaces and the tissues."""
     for name, words in SURFACES.items():
+        if name in head.given:
+            role = f"{name.replace('_', ' ')} surface"
+            path = next(file.path for file in inputs.files if file.role == role)
+            words = f"{words}, as given in {Path(path).name}"
         write_surface(
             out / "head" / f"{name}.surf.gii",
             getattr(head, name),

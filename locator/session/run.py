@@ -177,7 +177,9 @@ def run_head(options: SessionOptions, *, told: Told = silent) -> Outcome:
         "head_options": HeadOptions(),
     }
     with _at_work(out, told) as stages:
-        skin, markers, head = pipeline.head_alone(inputs.volume, step=stages.step, **settings)
+        skin, markers, head = pipeline.head_alone(
+            inputs.volume, own_surfaces=inputs.surfaces, step=stages.step, **settings
+        )
         results = RunResults(
             **_base("head", options, inputs),
             skin=skin,
@@ -278,6 +280,7 @@ def _compute_and_write(
         found.markers,
         found.electrodes,
         head_options=settings["head_options"],
+        own_surfaces=inputs.surfaces,
         step=stages.step,
     )
     outputs.write_head(out, inputs, head)

@@ -11,7 +11,6 @@ import numpy as np
 from numba import njit
 from numpy.typing import ArrayLike, NDArray
 from scipy import sparse
-from scipy.spatial import cKDTree
 
 from locator.errors import HeadError
 from locator.geometry import apply_affine, mesh_volume_mm3
@@ -58,6 +57,18 @@ ROUNDING_MM = 0.01
 
 FAR_MM = 3.0
 """A mean distance to our surface on the vault above this needs a person's eye."""
+
+ELSEWHERE_MM = 5.0
+"""A surface this far from ours on average that a plain shift would bring at least twice as near is
+not one of this T1: a shift of 1 cm moves the faces of a head by 5 mm on average."""
+
+UPPER_MM = 100.0
+"""Height of the part, from the top, by which a surface's place is judged."""
+
+UNKNOWN_CAUSE = (
+    "Likely it is in another space (a template, another scan, voxel indices) or another unit"
+    " (m, cm). Export it in scanner mm of this T1."
+)
 
 SEEN_MM = 40.0
 """Distances between surfaces are measured up to this."""
@@ -404,44 +415,53 @@ def _check_place(vertices: FloatArray, faces: IntArray, role: str, head: Head) -
     scalp = head.scalp
     within = winding(middle[None], scalp.vertices_scanner_mm, scalp.faces)[0]
     holds = winding(np.asarray(head.center_scanner_mm)[None], vertices, faces)[0]
-    if within and holds:
+    cause, misfit = _likely_cause(vertices, ours)
+    if within and holds and (cause is None or misfit < ELSEWHERE_MM):
         return
     apart = float(np.linalg.norm(middle - own_middle))
     msg = (
         f"The given {_words(role)} lies elsewhere: its centre at {_place(middle)} is {apart:.0f} mm"
-        f" from ours at {_place(own_middle)} (stage head, given surfaces)."
-        f" {_space_advice(vertices, ours)}"
+        f" from ours at {_place(own_middle)} (stage head, given surfaces). {cause or UNKNOWN_CAUSE}"
     )
     raise HeadError(msg)
 
 
-def _space_advice(vertices: FloatArray, ours: Surface) -> str:
-    """Likely causes of a misfit, with the one that would explain it first."""
-    tree = cKDTree(np.asarray(ours.vertices_scanner_mm))
-    middle = np.asarray(ours.vertices_scanner_mm).mean(axis=0)
+def _likely_cause(vertices: FloatArray, ours: Surface) -> tuple[str | None, float]:
+    """What would explain a misfit, None when neither a shift nor turned axes do; the misfit, mm.
 
-    def misfit(points: FloatArray) -> float:
-        return float(tree.query(points)[0].mean())
+    Compared are the upper 10 cm: where a scalp ends below differs from program to program.
+    """
+    points = np.asarray(ours.vertices_scanner_mm, dtype=np.float64)
 
-    now = misfit(vertices)
-    mirrored = misfit(vertices * [-1.0, -1.0, 1.0])
-    shift = middle - vertices.mean(axis=0)
-    moved = misfit(vertices + shift)
-    if mirrored < min(0.5 * now, 1.3 * moved):
+    def upper(of: FloatArray) -> FloatArray:
+        return of[of[:, 2] > of[:, 2].max() - UPPER_MM]
+
+    def misfit(of: FloatArray) -> float:
+        return float(distance_to_mesh(of, points, ours.faces, SEEN_MM).mean())
+
+    def corner(of: FloatArray) -> FloatArray:
+        middle = 0.5 * (of.min(axis=0) + of.max(axis=0))
+        return np.array([middle[0], middle[1], of[:, 2].max()])
+
+    part = upper(vertices)
+    now = misfit(part)
+    if now < FAR_MM:
+        return None, now
+    mirrored = misfit(part * [-1.0, -1.0, 1.0])
+    shift = corner(upper(points)) - corner(part)
+    moved = misfit(part + shift)
+    if mirrored < min(0.5 * now, moved + 2.0):
         return (
             "With x and y reversed in sign it would fit: it seems to be written with x to the left"
             " and y to the back. Export it in scanner mm with x to the right, y to the front."
-        )
+        ), now
     if moved < 0.5 * now:
         return (
-            f"Moved by {_place(shift)} it would fit: it seems to be in coordinates with another"
+            f"Moved by about {_place(shift)} it would fit: it seems to be in coordinates with another"
             " origin (often the middle of the volume), or to come from another scan. Export it in"
             " scanner mm of this T1."
-        )
-    return (
-        "Likely it is in another space (a template, another scan, voxel indices) or another unit"
-        " (m, cm). Export it in scanner mm of this T1."
-    )
+        ), now
+    return None, now
 
 
 # ── surfaces and their neighbours ────────────────────────────────────────────────────────
@@ -505,11 +525,8 @@ def _check_apart(
         advice.append(
             f"The given {_words(role)} lies {mean_apart[role]:.1f} mm from ours on average."
         )
-        advice.append(
-            _space_advice(
-                np.asarray(surfaces[role].vertices_scanner_mm, dtype=float), getattr(head, role)
-            )
-        )
+        vertices = np.asarray(surfaces[role].vertices_scanner_mm, dtype=np.float64)
+        advice.append(_likely_cause(vertices, getattr(head, role))[0] or UNKNOWN_CAUSE)
     elif len(mean_apart) == 2:
         advice.append(
             "Push them apart there (thin bone must be padded for the field model), or leave one of"
@@ -559,7 +576,10 @@ def _compare(surface: Surface, ours: Surface, role: str, head: Head) -> Finding:
         f"The given {_words(role)} is used instead of ours; on the vault it lies {mean:.1f} mm from"
         f" ours on average ({abs(signed):.1f} mm {'inside' if signed < 0 else 'outside'} of it with"
         f" sign), at most {distance[most]:.1f} mm at {_place(points[most])}.",
-        "Look at both over the T1; one of the two is wrong, or they are not of the same space."
+        (
+            _likely_cause(np.asarray(surface.vertices_scanner_mm, dtype=np.float64), ours)[0]
+            or "Look at both over the T1; one of the two is wrong, or they are of different spaces."
+        )
         if far
         else "Nothing needs to be done; what it says of thin places is not ours.",
         role,

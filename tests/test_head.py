@@ -154,8 +154,9 @@ def test_tissues_lie_in_their_layers():
     assert not np.isin(tissues[radius > 90], (GREY, WHITE, CSF, BONE)).any()
 
 
-def test_a_ball_has_no_cerebellum_and_no_brain_stem():
+def test_a_ball_has_no_cerebellum_and_no_brain_stem_and_that_is_said():
     _, _, head = ball_head()
+    assert any("No cerebellum" in one.problem and one.level == "look" for one in head.findings)
     assert not np.isin(np.asarray(head.tissues), (CEREBELLUM, BRAIN_STEM)).any()
 
 
@@ -423,6 +424,12 @@ def test_pial_vertices_of_a_real_head_lie_inside_the_inner_skull():
     tissues = np.asarray(head.tissues)
     assert 90 < (tissues == CEREBELLUM).sum() * ml < 180
     assert 15 < (tissues == BRAIN_STEM).sum() * ml < 50
+
+
+@pytest.mark.real_head
+def test_the_cerebellum_of_a_real_head_is_as_large_as_usual():
+    _, head = _real_head(real_heads.s1())
+    assert not any("cerebellum" in one.problem.lower() for one in head.findings)
 
 
 @pytest.mark.real_head

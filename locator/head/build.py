@@ -15,6 +15,7 @@ from locator.head.checks import check_head
 from locator.head.grid import make_grid
 from locator.head.model import (
     BONE,
+    CEREBELLUM,
     CSF,
     GREY,
     OTHER,
@@ -212,6 +213,7 @@ def build_head(
         rays=model_rays,
         padded=padded,
         brain_ml=brain_ml,
+        cerebellum_ml=float((inside == CEREBELLUM).sum()) / 1000.0,
     )
     report(1.0, "head done")
     logger.info("head: brain %.0f mL, leak %.2f, %d findings", brain_ml, brain.leak, len(findings))

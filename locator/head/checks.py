@@ -12,6 +12,9 @@ from locator.volume import Volume
 
 FloatArray = NDArray[np.float64]
 
+LEAST_CEREBELLUM, MOST_CEREBELLUM = 0.07, 0.16
+"""Share of the cerebellum in the brain's volume outside which a person should look."""
+
 
 def check_head(
     volume: Volume,
@@ -23,11 +26,12 @@ def check_head(
     rays: FloatArray,
     padded: FloatArray,
     brain_ml: float,
+    cerebellum_ml: float,
 ) -> tuple[Finding, ...]:
     """Compare the head with what adults have, and say where a person should look.
 
-    Volumes: adult brains hold about 950 to 1700 mL without CSF (value from memory); the vault is
-    5.4 to 8.2 mm thick by region (Li et al. 2007, Int J Vehicle Safety).
+    Volumes: adult brains hold about 950 to 1700 mL without CSF, a tenth of it cerebellum (values
+    from memory); the vault is 5.4 to 8.2 mm thick by region (Li et al. 2007, Int J Vehicle Safety).
     """
     findings = []
 
@@ -50,6 +54,21 @@ def check_head(
             "Look at the surfaces over the T1; a child, a lesion or a failed outline are possible.",
             "inner_skull",
             0.8,
+        )
+    share = cerebellum_ml / max(brain_ml, 1.0)
+    if not LEAST_CEREBELLUM <= share <= MOST_CEREBELLUM:
+        what = (
+            f"The cerebellum holds {cerebellum_ml:.0f} mL, {100 * share:.0f} % of the brain;"
+            " 8 to 13 % is usual"
+            if cerebellum_ml > 0
+            else "No cerebellum was told from the rest of the brain"
+        )
+        add(
+            "look",
+            f"{what}. The base of the brain may be cut off, or cerebellum be counted as cortex.",
+            "Look at the back of the skull's base over the T1; distrust sources there.",
+            "inner_skull",
+            0.5,
         )
     if brain.leak > 1.5:
         add(

@@ -483,7 +483,7 @@ def _check_apart(
         )
         for role in (inner, outer)
     ]
-    names = [f"{'given' if role in roles else 'own'} {_words(role)}" for role in (inner, outer)]
+    names = [f"{'the given' if role in roles else 'our'} {_words(role)}" for role in (inner, outer)]
     gaps, places, outside = [], [], 0
     for own, other, should in ((0, 1, True), (1, 0, False)):
         points = meshes[own][0]
@@ -537,7 +537,7 @@ def _check_apart(
         advice.append(
             f"Move the given surface away there, or give the {_words(missing)} that belongs to it."
         )
-    msg = f"The {names[0]} and the {names[1]} {problem} (stage head, given surfaces)."
+    msg = f"{names[0].capitalize()} and {names[1]} {problem} (stage head, given surfaces)."
     raise HeadError(" ".join([msg, *advice]))
 
 

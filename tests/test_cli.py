@@ -65,7 +65,7 @@ def test_help_without_a_command_names_the_commands_and_no_other(capsys):
         ["run", "--band", "8", "12"],
         ["run", "--against", "other"],
         ["run", "--share"],
-        ["run", "--source-space", "cortex"],
+        ["run", "--source-space", "skull"],
         ["run", "--method", "magic"],
         ["run", "--epoch", "0.5"],
         ["run", "--seed", "one"],
@@ -187,7 +187,7 @@ def test_flags_win_over_the_file(tmp_path):
         ("window = [0.3, 0.9]\n", SettingError, "window"),
         ("epoch = [-0.2]\n", SettingError, "epoch.*2 numbers"),
         ('side_marker = "up"\n', SettingError, "side_marker.*up.*right, left"),
-        ('source_space = "cortex"\n', SettingError, "source_space.*cortex"),
+        ('source_space = "skull"\n', SettingError, "source_space.*skull"),
         ("seed = 1.5\n", SettingError, "seed"),
     ],
 )

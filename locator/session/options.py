@@ -51,7 +51,7 @@ class SessionOptions:
     method : str or None
         ``eloreta``, ``sloreta``, ``dspm`` or ``mne``; default: the one of the inverse stage.
     source_space : str
-        ``grey`` or ``brain``.
+        ``grey``, ``brain`` or ``cortex``.
     surfaces : Path or None
         Folder with surfaces in place of ours: ``scalp``, ``outer_skull``, ``inner_skull``
         (``.surf.gii`` or ``.gii``, scanner mm), any of the three.

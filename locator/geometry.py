@@ -104,6 +104,31 @@ def vertex_normals(vertices: ArrayLike, faces: ArrayLike) -> Array:
     return normals / np.where(length > 0, length, 1.0)
 
 
+def tangents(normals: ArrayLike) -> tuple[Array, Array]:
+    """Two unit vectors square to each unit normal and to each other.
+
+    Parameters
+    ----------
+    normals : (N, 3) array_like
+
+    Returns
+    -------
+    first, second : (N, 3) ndarray
+
+    Examples
+    --------
+    >>> first, second = tangents([[1.0, 0.0, 0.0]])
+    >>> np.abs(first).tolist(), np.abs(second).tolist()
+    ([[0.0, 1.0, 0.0]], [[0.0, 0.0, 1.0]])
+    """
+    out = np.asarray(normals, dtype=np.float64)
+    first = np.cross(out, np.array([0.0, 0.0, 1.0]))
+    weak = np.linalg.norm(first, axis=1) < 0.2
+    first[weak] = np.cross(out[weak], np.array([1.0, 0.0, 0.0]))
+    first /= np.linalg.norm(first, axis=1, keepdims=True)
+    return first, np.cross(out, first)
+
+
 def mesh_volume_mm3(vertices: ArrayLike, faces: ArrayLike) -> float:
     """Signed volume inside a closed mesh; positive when the faces point outward.
 

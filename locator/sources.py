@@ -12,7 +12,7 @@ from scipy.spatial import cKDTree
 
 from locator.errors import HeadError
 from locator.geometry import apply_affine, vertex_normals, voxel_sizes_mm
-from locator.head import BRAIN_STEM, CEREBELLUM, CSF, GREY, WHITE, Head, Surface
+from locator.head import BRAIN, BRAIN_STEM, CEREBELLUM, CSF, GREY, WHITE, Head, Surface
 from locator.head.cortex import find_cortex
 from locator.head.morphology import box_around
 from locator.head.shape import distance_to_mesh, fill_mesh
@@ -115,11 +115,7 @@ def make_sources(
     if progress is not None:
         progress(0.0, "laying the sources")
     tissues = np.asarray(head.tissues)
-    wanted = (
-        np.isin(tissues, (GREY, WHITE, BRAIN_STEM, CEREBELLUM))
-        if kind == "brain"
-        else tissues == GREY
-    )
+    wanted = np.isin(tissues, BRAIN) if kind == "brain" else tissues == GREY
     affine = np.asarray(head.scanner_from_voxel)
     voxel_mm3 = abs(float(np.linalg.det(affine[:3, :3])))
     if wanted.sum() * voxel_mm3 < 20_000:

@@ -16,8 +16,7 @@ from locator.errors import CommandLineError, FileError, HeadError
 from locator.forward import ForwardOptions, compute_lead_field, electrode_rows
 from locator.geometry import apply_affine, icosphere, mesh_volume_mm3
 from locator.head import BONE, CSF, GREY, SOFT, Head, Surface, replace_surfaces, skull_thickness_mm
-from locator.head.given import crossings, winding
-from locator.head.shape import distance_to_mesh
+from locator.head.shape import crossings, distance_to_mesh, winding
 from locator.io.gifti import read_surface
 from locator.report.page import make_report
 from locator.results import Finding

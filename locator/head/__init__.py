@@ -4,6 +4,7 @@ from locator.head.build import build_head
 from locator.head.given import ROLES, replace_surfaces, skull_thickness_mm
 from locator.head.model import (
     BONE,
+    BRAIN,
     BRAIN_STEM,
     CEREBELLUM,
     CSF,
@@ -18,6 +19,7 @@ from locator.head.model import (
 
 __all__ = [
     "BONE",
+    "BRAIN",
     "BRAIN_STEM",
     "CEREBELLUM",
     "CSF",

@@ -12,6 +12,9 @@ from locator.volume import Volume
 
 FloatArray = NDArray[np.float64]
 
+LEAST_VAULT_MM, MOST_VAULT_MM = 4.0, 11.0
+"""Mean thickness of the vault outside which a person should look."""
+
 LEAST_CEREBELLUM, MOST_CEREBELLUM = 0.07, 0.16
 """Share of the cerebellum in the brain's volume outside which a person should look."""
 
@@ -79,7 +82,7 @@ def check_head(
             0.6,
         )
     thickness = (radii[1] - radii[0])[vault]
-    if len(thickness) and not 4.0 <= float(np.mean(thickness)) <= 11.0:
+    if len(thickness) and not LEAST_VAULT_MM <= float(np.mean(thickness)) <= MOST_VAULT_MM:
         add(
             "look",
             f"The vault is {np.mean(thickness):.1f} mm thick on average; 5 to 9 mm is usual.",
@@ -90,7 +93,7 @@ def check_head(
     many = int((padded > 0.1).sum())
     if many:
         place = rays[padded > 0.1].mean(axis=0)
-        words = _place_words(place)
+        words = place_words(place)
         add(
             "note",
             f"Bone or scalp is thinner than the model allows at {many} of {len(padded)} vertices"
@@ -130,11 +133,12 @@ def check_head(
     return tuple(findings)
 
 
-def _place_words(direction: FloatArray) -> str:
+def place_words(direction: FloatArray, least: float = 0.3) -> str:
+    """Where a direction (3,) leads, by the parts of it that are over `least`."""
     words = []
     for value, (minus, plus) in zip(
         direction, (("left", "right"), ("behind", "in front"), ("below", "above")), strict=True
     ):
-        if abs(value) > 0.3:
+        if abs(value) > least:
             words.append(plus if value > 0 else minus)
     return " and ".join(words) or "scattered"

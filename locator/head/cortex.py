@@ -13,7 +13,7 @@ from scipy.sparse.csgraph import connected_components
 from skimage.measure import marching_cubes
 
 from locator.errors import HeadError
-from locator.geometry import apply_affine, voxel_sizes_mm
+from locator.geometry import apply_affine, mesh_volume_mm3, voxel_sizes_mm
 from locator.head.model import BRAIN_STEM, CEREBELLUM, GREY, WHITE, Head
 from locator.head.morphology import box_around
 from locator.results import Frozen
@@ -100,10 +100,8 @@ def find_cortex(head: Head) -> Cortex:
     vertices, faces = vertices[used], faces.reshape(-1, 3)
     offset = np.array([part.start for part in box], dtype=float)
     placed = apply_affine(affine, vertices + offset)
-    corners = placed[faces]
-    normal = np.cross(corners[:, 1] - corners[:, 0], corners[:, 2] - corners[:, 0])
     # Out of the closed pieces: the volume they hold is positive.
-    if float(np.einsum("ij,ij->i", normal, corners.mean(axis=1) - placed.mean(axis=0)).sum()) < 0:
+    if mesh_volume_mm3(placed - placed.mean(axis=0), faces) < 0:
         faces = faces[:, ::-1]
     logger.info("cortex: %d vertices, %d triangles", len(placed), len(faces))
     return Cortex(vertices_scanner_mm=placed, faces=np.ascontiguousarray(faces, dtype=np.int32))

@@ -15,6 +15,9 @@ FloatArray = NDArray[np.float64]
 GREY, WHITE, CSF, BONE, SOFT, OTHER, BRAIN_STEM, CEREBELLUM = 1, 2, 3, 4, 5, 6, 10, 11
 """Labels of the tissue map."""
 
+BRAIN = (GREY, WHITE, BRAIN_STEM, CEREBELLUM)
+"""Labels that are brain, without its fluid."""
+
 
 @dataclass(frozen=True, eq=False, kw_only=True, slots=True)
 class Surface(Frozen):

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 from numba import njit
-from numpy.typing import NDArray
+from numpy.typing import ArrayLike, NDArray
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int32]
@@ -193,6 +193,163 @@ def distance_to_mesh(
     )
     distance: FloatArray = np.sqrt(square)
     return distance
+
+
+@njit(cache=True)
+def _winding(points, vertices, faces):  # type: ignore[no-untyped-def]
+    result = np.empty(len(points))
+    for p in range(len(points)):
+        total = 0.0
+        for f in range(len(faces)):
+            ax = vertices[faces[f, 0], 0] - points[p, 0]
+            ay = vertices[faces[f, 0], 1] - points[p, 1]
+            az = vertices[faces[f, 0], 2] - points[p, 2]
+            bx = vertices[faces[f, 1], 0] - points[p, 0]
+            by = vertices[faces[f, 1], 1] - points[p, 1]
+            bz = vertices[faces[f, 1], 2] - points[p, 2]
+            cx = vertices[faces[f, 2], 0] - points[p, 0]
+            cy = vertices[faces[f, 2], 1] - points[p, 1]
+            cz = vertices[faces[f, 2], 2] - points[p, 2]
+            la = np.sqrt(ax * ax + ay * ay + az * az)
+            lb = np.sqrt(bx * bx + by * by + bz * bz)
+            lc = np.sqrt(cx * cx + cy * cy + cz * cz)
+            triple = ax * (by * cz - bz * cy) + ay * (bz * cx - bx * cz) + az * (bx * cy - by * cx)
+            below = (
+                la * lb * lc
+                + (ax * bx + ay * by + az * bz) * lc
+                + (bx * cx + by * cy + bz * cz) * la
+                + (cx * ax + cy * ay + cz * az) * lb
+            )
+            total += np.arctan2(triple, below)
+        result[p] = total / (2 * np.pi)
+    return result
+
+
+def winding(points: ArrayLike, vertices: ArrayLike, faces: ArrayLike) -> NDArray[np.bool_]:
+    """Tell which points lie inside a closed outward mesh, by the solid angle of its faces, (N,).
+
+    References
+    ----------
+    .. [1] van Oosterom A, Strackee J (1983). The solid angle of a plane triangle. IEEE Trans
+       Biomed Eng 30:125-126.
+
+    Examples
+    --------
+    >>> from locator.geometry import icosphere
+    >>> winding([[0.0, 0, 0.5], [0, 0, 1.5]], *icosphere(2)).tolist()
+    [True, False]
+    """
+    turns = _winding(
+        np.ascontiguousarray(points, dtype=np.float64),
+        np.ascontiguousarray(vertices, dtype=np.float64),
+        np.ascontiguousarray(faces, dtype=np.int32),
+    )
+    inside: NDArray[np.bool_] = turns > 0.5
+    return inside
+
+
+@njit(cache=True)
+def _crossings(own, edges, other, faces, low, high, same):  # type: ignore[no-untyped-def]
+    count = 0
+    place = np.full(3, np.nan)
+    for e in range(len(edges)):
+        i, j = edges[e, 0], edges[e, 1]
+        p, q = own[i], own[j]
+        least = np.minimum(p, q)
+        most = np.maximum(p, q)
+        d0, d1, d2 = q[0] - p[0], q[1] - p[1], q[2] - p[2]
+        for f in range(len(faces)):
+            if (
+                low[f, 0] > most[0]
+                or high[f, 0] < least[0]
+                or low[f, 1] > most[1]
+                or high[f, 1] < least[1]
+                or low[f, 2] > most[2]
+                or high[f, 2] < least[2]
+            ):
+                continue
+            a, b, c = faces[f, 0], faces[f, 1], faces[f, 2]
+            if same and (i == a or i == b or i == c or j == a or j == b or j == c):
+                continue
+            u0 = other[b, 0] - other[a, 0]
+            u1 = other[b, 1] - other[a, 1]
+            u2 = other[b, 2] - other[a, 2]
+            v0 = other[c, 0] - other[a, 0]
+            v1 = other[c, 1] - other[a, 1]
+            v2 = other[c, 2] - other[a, 2]
+            h0, h1, h2 = d1 * v2 - d2 * v1, d2 * v0 - d0 * v2, d0 * v1 - d1 * v0
+            scale = u0 * h0 + u1 * h1 + u2 * h2
+            if scale == 0.0:
+                continue
+            s0, s1, s2 = p[0] - other[a, 0], p[1] - other[a, 1], p[2] - other[a, 2]
+            u = (s0 * h0 + s1 * h1 + s2 * h2) / scale
+            if u < 0.0 or u > 1.0:
+                continue
+            w0, w1, w2 = s1 * u2 - s2 * u1, s2 * u0 - s0 * u2, s0 * u1 - s1 * u0
+            v = (d0 * w0 + d1 * w1 + d2 * w2) / scale
+            if v < 0.0 or u + v > 1.0:
+                continue
+            t = (v0 * w0 + v1 * w1 + v2 * w2) / scale
+            if t < 0.0 or t > 1.0:
+                continue
+            if count == 0:
+                place[0], place[1], place[2] = p[0] + t * d0, p[1] + t * d1, p[2] + t * d2
+            count += 1
+            break
+    return count, place
+
+
+def crossings(
+    vertices: FloatArray,
+    faces: IntArray,
+    other_vertices: FloatArray,
+    other_faces: IntArray,
+    *,
+    same: bool,
+) -> tuple[int, FloatArray]:
+    """Count the edges of one closed mesh that pass through a face of another, or of itself.
+
+    Parameters
+    ----------
+    vertices, faces : (V, 3) and (F, 3) ndarray
+        The mesh whose edges are looked at.
+    other_vertices, other_faces : (W, 3) and (G, 3) ndarray
+    same : bool
+        Both are one mesh: faces that share a vertex with the edge do not count.
+
+    Returns
+    -------
+    count : int
+    place : (3,) ndarray
+        Of the first one; NaN when there is none.
+
+    References
+    ----------
+    .. [1] Möller T, Trumbore B (1997). Fast, minimum storage ray/triangle intersection. J Graphics
+       Tools 2:21-28.
+
+    Examples
+    --------
+    >>> from locator.geometry import icosphere
+    >>> points, faces = icosphere(2)
+    >>> crossings(points, faces, points, faces, same=True)[0]
+    0
+    >>> crossings(points, faces, points + [1.0, 0, 0], faces, same=False)[0] > 0
+    True
+    """
+    edges = np.concatenate([faces[:, [0, 1]], faces[:, [1, 2]], faces[:, [2, 0]]])
+    edges = edges[edges[:, 0] < edges[:, 1]]
+    corners = other_vertices[other_faces]
+    count, place = _crossings(
+        np.ascontiguousarray(vertices, dtype=np.float64),
+        np.ascontiguousarray(edges),
+        np.ascontiguousarray(other_vertices, dtype=np.float64),
+        np.ascontiguousarray(other_faces),
+        corners.min(axis=1),
+        corners.max(axis=1),
+        same,
+    )
+    return int(count), place
 
 
 def separate(

@@ -198,8 +198,9 @@ def _half_way(profile: FloatArray, before: float, outer: FloatArray, ring: IntAr
     """The outer table's edge half-way between dark and the first layer outside it, mm.
 
     That layer is the galea or a muscle, about `SOFT_LEVEL` of grey matter and often thinner than a
-    voxel, before the bright fat: half-way up to the fat lies 0.6 mm too far out. Where dark and bright cannot be told apart the place is kept; single rays follow the median of
-    their neighbours.
+    voxel, before the bright fat: half-way up to the fat lies 0.6 mm too far out. Where dark and
+    bright cannot be told apart the place is kept; single rays follow the median of their
+    neighbours.
     """
     row = np.arange(len(profile))
     fine = np.arange(-3.0, 3.01, 0.1)
@@ -246,11 +247,11 @@ def table_beyond(profile: FloatArray, first: NDArray[np.intp], last: FloatArray)
         From 0 (nothing) to 1 (a clear table).
     """
     n_samples = profile.shape[1]
-    sample = np.arange(n_samples)
-    scalp = np.where(sample[None, :] <= last[:, None], profile, 0.0)
+    within = np.arange(n_samples)[None, :] <= last[:, None]
+    scalp = np.where(within, profile, 0.0)
     after = np.maximum.accumulate(scalp[:, ::-1], axis=1)[:, ::-1]
-    # Bone is far darker than muscle (0.7 of grey matter) even where fat bleeds into it.
-    dark = np.clip((0.8 - scalp) / 0.4, 0.0, 1.0) * (sample[None, :] <= last[:, None])
+    # Bone is far darker than muscle even where fat bleeds into it.
+    dark = np.clip((SOFT_LEVEL - scalp) / 0.4, 0.0, 1.0) * within
     clear = np.zeros((len(profile), len(first)))
     for column, start in enumerate(first):
         if start >= n_samples:

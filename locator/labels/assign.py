@@ -8,7 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from locator.errors import LabelError, MarkerError, SideError
-from locator.geometry import rigid_fit
+from locator.geometry import rigid_fit, tangents
 from locator.labels.anatomy import Anatomy, find_anatomy
 from locator.labels.cap import CapModel, CapPrior
 from locator.labels.doubts import (
@@ -181,11 +181,7 @@ def contact_points(
         return np.zeros((0, 3)), np.zeros(0), np.zeros((0, 3))
     foot = project_to_skin(skin, centers)
     normal = skin_normals(skin, foot)
-    first = np.cross(normal, np.array([0.0, 0.0, 1.0]))
-    weak = np.linalg.norm(first, axis=1) < 0.2
-    first[weak] = np.cross(normal[weak], np.array([1.0, 0.0, 0.0]))
-    first /= np.linalg.norm(first, axis=1, keepdims=True)
-    second = np.cross(normal, first)
+    first, second = tangents(normal)
     total = normal.copy()
     for angle in np.arange(8) * (np.pi / 4):
         moved = foot + patch_mm * (np.cos(angle) * first + np.sin(angle) * second)

@@ -25,6 +25,7 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.stats import ncx2
 
+from locator.geometry import tangents
 from locator.labels.cap import CapModel
 
 FloatArray = NDArray[np.float64]
@@ -304,11 +305,7 @@ def _without_own(
     name's own pull and information are taken out again (the cavity of expectation propagation,
     Minka 2001, UAI 17:362).
     """
-    first = np.cross(normals, np.array([0.0, 0.0, 1.0]))
-    weak = np.linalg.norm(first, axis=1) < 0.2
-    first[weak] = np.cross(normals[weak], np.array([1.0, 0.0, 0.0]))
-    first /= np.linalg.norm(first, axis=1, keepdims=True)
-    frame = np.stack([first, np.cross(normals, first)], axis=2)  # (E, 3, 2)
+    frame = np.stack(tangents(normals), axis=2)  # (E, 3, 2)
     turned = frame.transpose(0, 2, 1)
     away = np.einsum("eka,ema->emk", turned, evidence.points[None] - places[:, None])
     taken = share.sum(axis=1)

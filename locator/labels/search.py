@@ -171,7 +171,8 @@ def search_cap(
     fits.sort(key=lambda fit: -fit.log_evidence)
     evidence = refine(fits[0], evidence)
     again: list[Fit] = []
-    for fit in fits[: (8 if fits[0].jitter_mm < LOOSE_JITTER_MM else 30)]:
+    most = 8 if fits[0].jitter_mm < LOOSE_JITTER_MM else 30
+    for fit in fits[:most]:
         add_fit(
             again,
             fit_cap(
